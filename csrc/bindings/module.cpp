@@ -1,0 +1,14 @@
+// pyvolterra._core: the table of contents of the bindings.
+#include <pybind11/pybind11.h>
+
+namespace volterra::bindings {
+void bind_build_info(pybind11::module_&);
+void bind_transform(pybind11::module_&);
+}  // namespace volterra::bindings
+
+PYBIND11_MODULE(_core, module) {
+    using namespace volterra::bindings;
+    module.doc() = "Compiled core of pyvolterra. Arguments are checked and coerced in Python.";
+    bind_build_info(module);
+    bind_transform(module);
+}

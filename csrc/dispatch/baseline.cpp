@@ -1,0 +1,10 @@
+// Instantiation unit: the kernels for the baseline instruction set. No logic here.
+#define VOLTERRA_TARGET baseline
+#define VOLTERRA_X86_TARGETS 1
+#include "targets.hpp"
+
+namespace volterra {
+
+const target_kernels kernels_baseline = {"baseline", baseline::adams_lanes, baseline::solve_adams_block};
+
+}  // namespace volterra

@@ -1,0 +1,30 @@
+// The kernels that exist once per instruction set, as a table of plain functions.
+#pragma once
+
+#include <cstddef>
+
+#include "volterra/adams.hpp"
+
+namespace volterra {
+
+struct target_kernels {
+    const char* name;
+    std::size_t adams_lanes;
+    void (*solve_adams_block)(const adams_block&);
+};
+
+extern const target_kernels kernels_baseline;
+#if VOLTERRA_X86_TARGETS
+extern const target_kernels kernels_avx2;
+extern const target_kernels kernels_avx512;
+#endif
+
+// The best table this machine can run, or the one that the environment variable
+// PYVOLTERRA_INSTRUCTION_SET names. Throws std::invalid_argument if that one does not exist or
+// the machine cannot run it.
+const target_kernels& selected_kernels();
+
+// Every table this machine can run, the best one last; null-terminated.
+const target_kernels* const* available_kernels();
+
+}  // namespace volterra

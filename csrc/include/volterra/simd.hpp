@@ -1,0 +1,93 @@
+// Packs of doubles: the widest vector the instruction set of this translation unit offers.
+//
+// Everything that is compiled once per instruction set lives in namespace
+// volterra::VOLTERRA_TARGET, so that the linker can never mix two instantiations. For the same
+// reason no standard-library template is used in such code: its instantiations would be shared.
+// A unit names its target before the first include; a plain C++ user gets one called `native`.
+#pragma once
+
+#include <cstddef>
+#include <cstring>
+
+#ifndef VOLTERRA_TARGET
+#define VOLTERRA_TARGET native
+#endif
+
+#if defined(__GNUC__) || defined(__clang__)
+#define VOLTERRA_INLINE inline __attribute__((always_inline))
+#else
+#define VOLTERRA_INLINE __forceinline
+#endif
+
+namespace volterra::VOLTERRA_TARGET {
+
+#if defined(__AVX512F__)
+inline constexpr std::size_t pack_width = 8;
+inline constexpr std::size_t vector_registers = 32;
+#elif defined(__AVX__)
+inline constexpr std::size_t pack_width = 4;
+inline constexpr std::size_t vector_registers = 16;
+#elif defined(__aarch64__)
+inline constexpr std::size_t pack_width = 2;
+inline constexpr std::size_t vector_registers = 32;
+#else
+inline constexpr std::size_t pack_width = 2;
+inline constexpr std::size_t vector_registers = 16;
+#endif
+
+#if defined(__GNUC__) || defined(__clang__)
+
+// Arithmetic, comparison and `mask ? a : b` come with the compiler's vector extension.
+typedef double pack __attribute__((vector_size(sizeof(double) * pack_width)));
+
+VOLTERRA_INLINE pack sqrt(pack x) {
+    pack r;
+    for (std::size_t i = 0; i < pack_width; ++i) r[i] = __builtin_sqrt(x[i]);
+    return r;
+}
+VOLTERRA_INLINE pack abs(pack x) { return x < 0.0 ? -x : x; }
+
+#else
+#error "a compiler with vector extensions is required (g++, clang++ or clang-cl)"
+#endif
+
+VOLTERRA_INLINE pack load(const double* p) {
+    pack r;
+    std::memcpy(&r, p, sizeof r);
+    return r;
+}
+VOLTERRA_INLINE void store(double* p, pack x) { std::memcpy(p, &x, sizeof x); }
+VOLTERRA_INLINE pack broadcast(double x) { return x - pack{}; }
+
+// A pack of complex numbers, split into real and imaginary parts. std::complex is avoided: its
+// product calls a library routine for the sake of infinities and does not vectorise.
+struct complex_pack {
+    pack re, im;
+};
+
+VOLTERRA_INLINE complex_pack operator+(complex_pack a, complex_pack b) {
+    return {a.re + b.re, a.im + b.im};
+}
+VOLTERRA_INLINE complex_pack operator-(complex_pack a, complex_pack b) {
+    return {a.re - b.re, a.im - b.im};
+}
+VOLTERRA_INLINE complex_pack operator*(complex_pack a, complex_pack b) {
+    return {a.re * b.re - a.im * b.im, a.re * b.im + a.im * b.re};
+}
+VOLTERRA_INLINE complex_pack operator*(pack a, complex_pack b) { return {a * b.re, a * b.im}; }
+
+VOLTERRA_INLINE complex_pack operator/(complex_pack a, complex_pack b) {
+    const pack scale = 1.0 / (b.re * b.re + b.im * b.im);
+    return {(a.re * b.re + a.im * b.im) * scale, (a.im * b.re - a.re * b.im) * scale};
+}
+
+// Principal square root (real part >= 0) by the half-angle formula, stable on both half planes.
+VOLTERRA_INLINE complex_pack sqrt(complex_pack z) {
+    const pack modulus = sqrt(z.re * z.re + z.im * z.im);
+    const pack larger = sqrt(0.5 * (modulus + abs(z.re)));
+    const pack smaller = larger > 0.0 ? 0.5 * z.im / larger : broadcast(0.0);
+    const auto right = z.re >= 0.0;
+    return {right ? larger : abs(smaller), right ? smaller : (z.im < 0.0 ? -larger : larger)};
+}
+
+}  // namespace volterra::VOLTERRA_TARGET
