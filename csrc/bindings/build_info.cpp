@@ -27,6 +27,7 @@ void bind_build_info(py::module_& module) {
             PYBIND11_VERSION_MINOR);
         info["instruction_set"] = selected_kernels().name;
         info["instruction_sets_available"] = available;
+        info["adams_lanes"] = selected_kernels().adams_lanes;
         return info;
     }, "Compiler, instruction set chosen and those available, as a dict.");
 }

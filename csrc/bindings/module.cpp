@@ -3,6 +3,8 @@
 
 namespace volterra::bindings {
 void bind_build_info(pybind11::module_&);
+void bind_price(pybind11::module_&);
+void bind_resolvents(pybind11::module_&);
 void bind_transform(pybind11::module_&);
 }  // namespace volterra::bindings
 
@@ -10,5 +12,7 @@ PYBIND11_MODULE(_core, module) {
     using namespace volterra::bindings;
     module.doc() = "Compiled core of pyvolterra. Arguments are checked and coerced in Python.";
     bind_build_info(module);
+    bind_resolvents(module);
     bind_transform(module);
+    bind_price(module);
 }

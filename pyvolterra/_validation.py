@@ -1,0 +1,53 @@
+"""Argument checks shared by the public modules: each failure names the argument and the rule."""
+
+import numbers
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+def finite_number(value: object, name: str) -> float:
+    """A finite real scalar as a float."""
+    if isinstance(value, np.ndarray) and value.ndim == 0:
+        value = value[()]
+    if isinstance(value, (bool, np.bool_)) or not isinstance(value, numbers.Real):
+        raise TypeError(f"{name} must be a real number, got {type(value).__name__}")
+    number = float(value)
+    if not np.isfinite(number):
+        raise ValueError(f"{name} must be finite, got {number}")
+    return number
+
+
+def _as_array(value: object, name: str, dtype: type) -> NDArray[Any]:
+    array = np.asarray(value)
+    allowed = "iufc" if dtype is complex else "iuf"
+    if array.dtype.kind not in allowed:
+        kind = "complex or real" if dtype is complex else "real"
+        raise TypeError(f"{name} must hold {kind} numbers, got dtype {array.dtype}")
+    array = array.astype(dtype)
+    finite = np.isfinite(array)
+    if not finite.all():
+        where = tuple(int(i) for i in np.argwhere(~finite)[0])
+        at = f"{name}[{', '.join(map(str, where))}]" if where else name
+        raise ValueError(f"{at} must be finite, got {array[where]}")
+    return array
+
+
+def finite_reals(value: object, name: str) -> NDArray[np.float64]:
+    """An array of finite reals of any shape, copied to float64."""
+    return _as_array(value, name, float)
+
+
+def finite_complex(value: object, name: str) -> NDArray[np.complex128]:
+    """An array of finite complex numbers of any shape, copied to complex128."""
+    return _as_array(value, name, complex)
+
+
+def require(condition: NDArray[np.bool_], values: NDArray[Any], name: str, rule: str) -> None:
+    """Raise ValueError naming the first element of ``values`` where ``condition`` fails."""
+    if condition.all():
+        return
+    where = tuple(int(i) for i in np.argwhere(~condition)[0])
+    at = f"{name}[{', '.join(map(str, where))}]" if where else name
+    raise ValueError(f"{at} must be {rule}, got {values[where]}")
