@@ -18,11 +18,12 @@ def parameter_covariance(
     """Covariance of the parameters that are inside their bounds.
 
     A bid-ask half-width is not a standard deviation, so the size of the noise is taken from the
-    residuals, quote by quote (the heteroscedasticity-consistent estimator of A
-    heteroskedasticity-consistent covariance matrix estimator and a direct test for
-    heteroskedasticity, Econometrica 48, 1980; from memory) with the factor n/(n-p). To that comes
-    the spread caused by errors that whole groups of quotes share, one column of ``shared_errors``
-    (change of the residuals at one standard error) per source: the uncertain forwards.
+    residuals, quote by quote, each over one less its leverage (the third estimator of Some
+    heteroskedasticity-consistent covariance matrix estimators with improved finite sample
+    properties, J. Econometrics 29, 1985; from memory): curve levels rest on few quotes, whose
+    residuals are smaller than their noise. To that comes the spread caused by errors that whole
+    groups of quotes share, one column of ``shared_errors`` (change of the residuals at one standard
+    error) per source: the uncertain forwards.
 
     Returns
     -------
@@ -41,9 +42,9 @@ def parameter_covariance(
     scale = np.linalg.norm(columns, axis=0)
     scale[scale == 0.0] = 1.0
     pseudo_inverse = np.linalg.pinv(columns / scale, rcond=1e-12) / scale[:, None]
-    n, p = columns.shape
-    spread = pseudo_inverse * residuals
-    covariance = spread @ spread.T * (n / max(n - p, 1))
+    leverage = np.einsum("ij,ji->i", columns, pseudo_inverse)
+    spread = pseudo_inverse * (residuals / np.maximum(1.0 - leverage, 0.05))
+    covariance = spread @ spread.T
     shared = pseudo_inverse @ shared_errors
     covariance = covariance + shared @ shared.T
     to_reported = parameter_map[np.ix_(inside, inside)]

@@ -33,7 +33,7 @@ def summarise_smiles(smiles: SmileQuotes) -> SmileSummary:
         if near.sum() < 3:
             near = np.argsort(np.abs(z))[:3]
         degree = min(2, len(np.unique(z[near])) - 1)
-        width = (smiles.ask_volatility - vol)[here][near]
+        width = (smiles.ask_volatility[here] - vol)[near]
         coefficients = np.polynomial.polynomial.polyfit(
             z[near], vol[near], degree, w=1.0 / np.maximum(width, 1e-4)
         )
