@@ -19,8 +19,15 @@ x86 = platform.machine().lower() in {"x86_64", "amd64"}
 base_flags = (
     ["/O2", "/std:c++20", "/EHsc"]
     if msvc
-    else ["-O3", "-std=c++20", "-fvisibility=hidden", "-fPIC", "-g0"]
-    + ["-fno-math-errno", "-fno-trapping-math"]
+    else [
+        "-O3",
+        "-std=c++20",
+        "-fvisibility=hidden",
+        "-fPIC",
+        "-g0",
+        "-fno-math-errno",
+        "-fno-trapping-math",
+    ]
 )
 if msvc:
     target_flags = {"baseline": [], "avx2": ["/arch:AVX2"], "avx512": ["/arch:AVX512"]}
@@ -54,14 +61,13 @@ libraries = [
 
 extension = Pybind11Extension(
     "pyvolterra._core",
-    sorted(str(p) for p in Path("csrc/bindings").glob("*.cpp")) + ["csrc/dispatch/select.cpp"],
+    [*sorted(str(p) for p in Path("csrc/bindings").glob("*.cpp")), "csrc/dispatch/select.cpp"],
     include_dirs=include,
     define_macros=[("VOLTERRA_X86_TARGETS", "1" if x86 else "0")],
     extra_compile_args=base_flags,
     depends=headers,
     cxx_std=20,
 )
-
 
 
 class BuildExtension(build_ext):

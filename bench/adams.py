@@ -74,10 +74,14 @@ def main() -> None:
     info = _core.build_info()
     u = np.linspace(0.0, 100.0, COUNT) - 0.5j
     rows = []
-    print(f"{COUNT} values of u, hurst {HURST}, one thread, {info['compiler']}, "
-          f"NumPy {np.__version__}, {platform.machine()}")
-    print(f"{'steps':>6} {'scheme':>10} {'us per u':>10} {'NumPy us per u':>15} {'ratio':>7} "
-          f"{'goal':>5} {'difference':>11}")
+    print(
+        f"{COUNT} values of u, hurst {HURST}, one thread, {info['compiler']}, "
+        f"NumPy {np.__version__}, {platform.machine()}"
+    )
+    print(
+        f"{'steps':>6} {'scheme':>10} {'us per u':>10} {'NumPy us per u':>15} {'ratio':>7} "
+        f"{'goal':>5} {'difference':>11}"
+    )
     for steps in STEPS:
         psi = reference(u, steps)[1]
         slow = median_seconds(lambda steps=steps: reference(u, steps))
@@ -90,27 +94,50 @@ def main() -> None:
                 )
             )
             ratio = slow / fast
-            rows.append({"steps": steps, "instruction_set": name, "us_per_u": 1e6 * fast / COUNT,
-                         "numpy_us_per_u": 1e6 * slow / COUNT, "ratio": ratio,
-                         "goal": GOAL.get(name), "difference": difference})
-            print(f"{steps:>6} {name:>10} {1e6 * fast / COUNT:>10.3f} "
-                  f"{1e6 * slow / COUNT:>15.3f} {ratio:>7.1f} {GOAL.get(name, 0):>5.0f} "
-                  f"{difference:>11.1e}")
+            rows.append(
+                {
+                    "steps": steps,
+                    "instruction_set": name,
+                    "us_per_u": 1e6 * fast / COUNT,
+                    "numpy_us_per_u": 1e6 * slow / COUNT,
+                    "ratio": ratio,
+                    "goal": GOAL.get(name),
+                    "difference": difference,
+                }
+            )
+            print(
+                f"{steps:>6} {name:>10} {1e6 * fast / COUNT:>10.3f} "
+                f"{1e6 * slow / COUNT:>15.3f} {ratio:>7.1f} {GOAL.get(name, 0):>5.0f} "
+                f"{difference:>11.1e}"
+            )
     print("\nmemory a transform adds to a fresh process (MiB):")
     memory = []
     for steps in STEPS:
         cells = {count: peak_memory(count, steps) for count in (COUNT, 16 * COUNT)}
         history = 16.0 * cells_per_block() * (steps + 1) / 2**20
-        memory.append({"steps": steps, "block_history_mib": history,
-                       "all_u_history_mib": 16.0 * 16 * COUNT * (steps + 1) / 2**20,
-                       **{f"added_mib_{count}_u": value for count, value in cells.items()}})
-        print(f"{steps:>6} steps: " + ", ".join(f"{v:.2f} for {c} u" for c, v in cells.items())
-              + f"; history of one block {history:.2f}, "
-              f"of all {16 * COUNT} u it would be {16.0 * 16 * COUNT * (steps + 1) / 2**20:.0f}")
+        memory.append(
+            {
+                "steps": steps,
+                "block_history_mib": history,
+                "all_u_history_mib": 16.0 * 16 * COUNT * (steps + 1) / 2**20,
+                **{f"added_mib_{count}_u": value for count, value in cells.items()},
+            }
+        )
+        print(
+            f"{steps:>6} steps: "
+            + ", ".join(f"{v:.2f} for {c} u" for c, v in cells.items())
+            + f"; history of one block {history:.2f}, "
+            f"of all {16 * COUNT} u it would be {16.0 * 16 * COUNT * (steps + 1) / 2**20:.0f}"
+        )
     if arguments.json:
         arguments.json.parent.mkdir(parents=True, exist_ok=True)
-        report = {"build": info, "numpy": np.__version__, "speed": rows, "memory": memory,
-                  "peak_rss_mib": resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024.0}
+        report = {
+            "build": info,
+            "numpy": np.__version__,
+            "speed": rows,
+            "memory": memory,
+            "peak_rss_mib": resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024.0,
+        }
         arguments.json.write_text(json.dumps(report, indent=1) + "\n")
 
 

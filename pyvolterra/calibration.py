@@ -145,9 +145,7 @@ def calibrate(
     errors.update(zip(names, np.sqrt(np.diag(covariance)), strict=True))
     volatility = problem.model_volatility(solution.x)
     say("checking for arbitrage")
-    arbitrage = check_arbitrage(
-        model, np.unique(smiles.maturity), np.linspace(-1.0, 1.0, 41)
-    )
+    arbitrage = check_arbitrage(model, np.unique(smiles.maturity), np.linspace(-1.0, 1.0, 41))
     return Fit(
         model=model,
         parameters=values,
@@ -265,9 +263,7 @@ class _Problem:
         curve = ForwardVariance.driven(
             kernel, p["initial_variance"], self.curve_times, drives, p["mean_reversion"]
         )
-        return VolterraHeston(
-            kernel, p["vol_of_vol"], p["correlation"], curve, p["mean_reversion"]
-        )
+        return VolterraHeston(kernel, p["vol_of_vol"], p["correlation"], curve, p["mean_reversion"])
 
     def plan(self, x: NDArray[np.float64]) -> None:
         """Freeze a Fourier line for each expiry, wide enough for the models near ``x``."""

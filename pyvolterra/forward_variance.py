@@ -113,8 +113,7 @@ class ForwardVariance:
         """
         if not isinstance(kernel, Kernel):
             raise TypeError(
-                "kernel must be a FractionalKernel or ConstantKernel, "
-                f"got {type(kernel).__name__}"
+                f"kernel must be a FractionalKernel or ConstantKernel, got {type(kernel).__name__}"
             )
         start = finite_number(initial_variance, "initial_variance")
         if start < 0.0:

@@ -66,8 +66,14 @@ class VolterraHeston:
     without the global interpreter lock.
     """
 
-    __slots__ = ("_core_model", "correlation", "forward_variance", "kernel", "mean_reversion",
-                 "vol_of_vol")
+    __slots__ = (
+        "_core_model",
+        "correlation",
+        "forward_variance",
+        "kernel",
+        "mean_reversion",
+        "vol_of_vol",
+    )
 
     def __init__(
         self,
@@ -124,8 +130,13 @@ class VolterraHeston:
         raise AttributeError(f"{type(self).__name__} is immutable: cannot delete {name}")
 
     def __reduce__(self) -> tuple[Any, ...]:
-        arguments = (self.kernel, self.vol_of_vol, self.correlation, self.forward_variance,
-                     self.mean_reversion)
+        arguments = (
+            self.kernel,
+            self.vol_of_vol,
+            self.correlation,
+            self.forward_variance,
+            self.mean_reversion,
+        )
         return type(self), arguments
 
     def __repr__(self) -> str:

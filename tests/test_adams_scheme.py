@@ -23,8 +23,7 @@ U = np.concatenate([np.linspace(0.0, 200.0, 37), np.linspace(0.0, 50.0, 9) - 0.5
 @pytest.mark.parametrize("case", CASES)
 def test_equals_the_reference(case, steps, instruction_set):
     hurst, nu, rho, reversion, horizon = case
-    psi = _core.adams_solution((hurst, nu, rho, reversion), U + 0j, horizon, steps,
-                               instruction_set)
+    psi = _core.adams_solution((hurst, nu, rho, reversion), U + 0j, horizon, steps, instruction_set)
     c0, c1 = -0.5 * (U**2 + 1j * U), 1j * U * rho * nu - reversion
     _, expected, _ = riccati_adams(hurst, c0, c1, 0.5 * nu**2, horizon, steps)
     scale = np.maximum(1.0, np.abs(expected).max(axis=0))
@@ -46,23 +45,31 @@ def test_log_transform_equals_the_reference(hurst):
         for maturity in (0.07, 0.8, 2.0):
             value = model.log_characteristic_function(U, maturity, scheme="adams", steps=100)
             expected = log_transform_adams(
-                U, maturity, 100, hurst=hurst, vol_of_vol=0.5, correlation=-0.6,
-                mean_reversion=reversion, **arguments,
+                U,
+                maturity,
+                100,
+                hurst=hurst,
+                vol_of_vol=0.5,
+                correlation=-0.6,
+                mean_reversion=reversion,
+                **arguments,
             )
             np.testing.assert_allclose(value, expected, rtol=1e-12, atol=1e-12)
 
 
 def test_instruction_sets_agree():
     model, curve = (0.1, 0.4, -0.7, 0.0), (True, 0.04, np.array([1.0]), np.array([0.02]))
-    values = [_core.basis_transform(model, curve, U + 0j, 1.0, 200, name)
-              for name in INSTRUCTION_SETS]
+    values = [
+        _core.basis_transform(model, curve, U + 0j, 1.0, 200, name) for name in INSTRUCTION_SETS
+    ]
     for value in values[1:]:
         np.testing.assert_allclose(value, values[0], rtol=1e-12, atol=1e-13)
 
 
 def test_the_implicit_corrector_stays_stable_where_an_explicit_predictor_overflows():
-    model = pv.VolterraHeston(pv.FractionalKernel(0.12), 0.331, -0.681,
-                              pv.ForwardVariance.flat(0.04))
+    model = pv.VolterraHeston(
+        pv.FractionalKernel(0.12), 0.331, -0.681, pv.ForwardVariance.flat(0.04)
+    )
     u = np.array([100.0, 1000.0, 3000.0])
     coarse = model.characteristic_function(u, 1.0, scheme="adams", steps=50)
     assert np.all(np.isfinite(coarse))

@@ -19,8 +19,12 @@ def fit(quotes):
 
 
 def _truth():
-    values = {"hurst": demo.HURST, "vol_of_vol": demo.VOL_OF_VOL, "correlation": demo.CORRELATION,
-              "initial_variance": demo.INITIAL_VARIANCE}
+    values = {
+        "hurst": demo.HURST,
+        "vol_of_vol": demo.VOL_OF_VOL,
+        "correlation": demo.CORRELATION,
+        "initial_variance": demo.INITIAL_VARIANCE,
+    }
     return values | {f"drive_{k + 1}": level for k, level in enumerate(demo.DRIVE)}
 
 
@@ -48,9 +52,13 @@ def test_fits_inside_the_quotes(fit):
     assert fit.model.forward_variance.is_admissible(fit.model.kernel)
     assert fit.model_volatility.shape == fit.residuals.shape == fit.smiles.strike.shape
     np.testing.assert_allclose(
-        fit.model.implied_volatility(fit.smiles.strike, fit.smiles.maturity,
-                                     forward=fit.smiles.forward, tolerance=1e-6),
-        fit.model_volatility, rtol=0, atol=2e-4)
+        fit.model.implied_volatility(
+            fit.smiles.strike, fit.smiles.maturity, forward=fit.smiles.forward, tolerance=1e-6
+        ),
+        fit.model_volatility,
+        rtol=0,
+        atol=2e-4,
+    )
 
 
 def test_forwards_are_those_of_the_demo(fit):

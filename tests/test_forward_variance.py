@@ -21,8 +21,9 @@ def test_flat():
 
 def test_piecewise_constant_levels_hold_up_to_their_times():
     curve = pv.ForwardVariance.piecewise_constant([0.25, 1.0], [0.09, 0.01])
-    np.testing.assert_array_equal(curve([0.0, 0.25, 0.2500001, 1.0, 5.0]),
-                                  [0.09, 0.09, 0.01, 0.01, 0.01])
+    np.testing.assert_array_equal(
+        curve([0.0, 0.25, 0.2500001, 1.0, 5.0]), [0.09, 0.09, 0.01, 0.01, 0.01]
+    )
     np.testing.assert_allclose(curve.total_variance([0.25, 2.0]), [0.0225, 0.0225 + 0.0175])
     assert not curve.is_admissible(ROUGH)  # a down-step
     assert pv.ForwardVariance.piecewise_constant([0.25, 1.0], [0.01, 0.09]).is_admissible(ROUGH)
@@ -37,8 +38,13 @@ def test_driven_curve_is_the_initial_variance_plus_the_kernel_against_the_drive(
     for t in (0.05, 0.3, 0.7, 2.0):
         # int_0^t K(t-s) theta(s) ds with the singularity removed by x = (t-s)^alpha
         breaks = [(t - s) ** ROUGH.alpha for s in (0.1, 0.5) if s < t]
-        value, _ = quad(lambda x, t=t: drive(t - x ** (1 / ROUGH.alpha)), 0.0, t**ROUGH.alpha,
-                        points=sorted(breaks) or None, epsabs=1e-14)
+        value, _ = quad(
+            lambda x, t=t: drive(t - x ** (1 / ROUGH.alpha)),
+            0.0,
+            t**ROUGH.alpha,
+            points=sorted(breaks) or None,
+            epsabs=1e-14,
+        )
         expected = 0.02 + value / math.gamma(ROUGH.alpha + 1.0)
         assert curve(t) == pytest.approx(expected, rel=1e-10)
 
@@ -76,15 +82,23 @@ def test_admissible_floor_is_the_first_kind_resolvent():
     [
         (lambda: pv.ForwardVariance.flat(-0.01), "level must be a variance"),
         (lambda: pv.ForwardVariance.flat(math.nan), "level must be finite"),
-        (lambda: pv.ForwardVariance.piecewise_constant([1.0, 0.5], [0.1, 0.1]),
-         r"times\[1\] must be positive and increasing"),
-        (lambda: pv.ForwardVariance.piecewise_constant([0.5, 1.0], [0.1]),
-         r"levels must have the shape of times \(2,\), got \(1,\)"),
-        (lambda: pv.ForwardVariance.piecewise_constant([0.5, 1.0], [0.1, -0.1]),
-         r"levels\[1\] must be variances"),
+        (
+            lambda: pv.ForwardVariance.piecewise_constant([1.0, 0.5], [0.1, 0.1]),
+            r"times\[1\] must be positive and increasing",
+        ),
+        (
+            lambda: pv.ForwardVariance.piecewise_constant([0.5, 1.0], [0.1]),
+            r"levels must have the shape of times \(2,\), got \(1,\)",
+        ),
+        (
+            lambda: pv.ForwardVariance.piecewise_constant([0.5, 1.0], [0.1, -0.1]),
+            r"levels\[1\] must be variances",
+        ),
         (lambda: pv.ForwardVariance.driven(ROUGH, -0.1, [1.0], [0.1]), "initial_variance must"),
-        (lambda: pv.ForwardVariance.driven(ROUGH, 0.01, [1.0], [-1.0]),
-         "levels make the forward variance negative"),
+        (
+            lambda: pv.ForwardVariance.driven(ROUGH, 0.01, [1.0], [-1.0]),
+            "levels make the forward variance negative",
+        ),
         (lambda: pv.ForwardVariance.flat(0.1)([-1.0]), r"t\[0\] must be non-negative"),
     ],
 )

@@ -11,8 +11,9 @@ import pyvolterra as pv
 def test_fractional_kernel_value():
     kernel = pv.FractionalKernel(hurst=0.12)
     assert kernel.alpha == 0.62
-    np.testing.assert_allclose(kernel([0.25, 1.0]), [0.25**-0.38 / math.gamma(0.62),
-                                                     1.0 / math.gamma(0.62)], rtol=1e-15)
+    np.testing.assert_allclose(
+        kernel([0.25, 1.0]), [0.25**-0.38 / math.gamma(0.62), 1.0 / math.gamma(0.62)], rtol=1e-15
+    )
 
 
 def test_constant_kernel_is_the_fractional_one_at_one_half():

@@ -64,8 +64,9 @@ def test_identities(p, x):
     t = p["maturity"]
     options = {"tolerance": 1e-3}
     # total mass and martingale
-    np.testing.assert_allclose(model.characteristic_function([0.0, -1j], t, **options), 1.0,
-                               atol=1e-13)
+    np.testing.assert_allclose(
+        model.characteristic_function([0.0, -1j], t, **options), 1.0, atol=1e-13
+    )
     # conjugate symmetry
     z = x - 0.5j
     left = model.characteristic_function(z, t, **options)
@@ -75,33 +76,52 @@ def test_identities(p, x):
     assert abs(model.characteristic_function(x, t, **options)) <= 1.0 + 1e-3
     # additivity in the curve
     parts = [
-        pv.VolterraHeston(kernel, p["nu"], p["rho"],
-                          pv.ForwardVariance.piecewise_constant([0.1, 1.0], levels),
-                          p["reversion"]).log_characteristic_function(
-                              z, t, scheme="adams", steps=64)
+        pv.VolterraHeston(
+            kernel,
+            p["nu"],
+            p["rho"],
+            pv.ForwardVariance.piecewise_constant([0.1, 1.0], levels),
+            p["reversion"],
+        ).log_characteristic_function(z, t, scheme="adams", steps=64)
         for levels in ([0.03, 0.0], [0.0, 0.05], [0.03, 0.05])
     ]
     assert parts[0] + parts[1] == pytest.approx(parts[2], rel=1e-12, abs=1e-14)
 
 
 @pytest.mark.parametrize("maturity", [0.01, 1.0, 10.0])
-@pytest.mark.parametrize(("nu", "rho", "reversion"),
-                         [(0.6, -0.7, 1.0), (1.0, -0.9, 0.0), (1e-6, -0.5, 2.0), (0.3, 0.4, 0.2)])
+@pytest.mark.parametrize(
+    ("nu", "rho", "reversion"),
+    [(0.6, -0.7, 1.0), (1.0, -0.9, 0.0), (1e-6, -0.5, 2.0), (0.3, 0.4, 0.2)],
+)
 def test_classical_closed_form(nu, rho, reversion, maturity):
     # Closed form of the classical model in mpmath arithmetic: A closed-form solution for options
     # with stochastic volatility, Rev. Financ. Stud. 6, 1993 (memory).
     u = np.array([0.0, 1e-6, 0.5, 3.0, 40.0, 200.0, 1.0 - 0.5j, 50.0 - 0.5j, -1j])
     spot = pv.VolterraHeston.from_spot_variance(
-        pv.FractionalKernel(0.5), vol_of_vol=nu, correlation=rho, mean_reversion=reversion,
-        initial_variance=0.05, long_run_variance=0.03,
+        pv.FractionalKernel(0.5),
+        vol_of_vol=nu,
+        correlation=rho,
+        mean_reversion=reversion,
+        initial_variance=0.05,
+        long_run_variance=0.03,
     )
     value = spot.log_characteristic_function(u, maturity)
-    expected = np.array([
-        complex(classical.log_transform_mp(z, maturity, vol_of_vol=nu, correlation=rho,
-                                           mean_reversion=reversion, initial_variance=0.05,
-                                           long_run_variance=0.03))
-        for z in u
-    ])
+    expected = np.array(
+        [
+            complex(
+                classical.log_transform_mp(
+                    z,
+                    maturity,
+                    vol_of_vol=nu,
+                    correlation=rho,
+                    mean_reversion=reversion,
+                    initial_variance=0.05,
+                    long_run_variance=0.03,
+                )
+            )
+            for z in u
+        ]
+    )
     np.testing.assert_allclose(np.exp(value), np.exp(expected), rtol=0, atol=1e-13)
     np.testing.assert_allclose(value, expected, rtol=1e-12, atol=1e-13)
 
@@ -109,25 +129,42 @@ def test_classical_closed_form(nu, rho, reversion, maturity):
 def test_error_estimate_bounds_the_true_error():
     # Against the power-series oracle, which shares nothing with time stepping.
     model = pv.VolterraHeston.from_spot_variance(
-        pv.FractionalKernel(0.12), vol_of_vol=0.331, correlation=-0.681, mean_reversion=0.1,
-        initial_variance=0.0392, long_run_variance=0.3156,
+        pv.FractionalKernel(0.12),
+        vol_of_vol=0.331,
+        correlation=-0.681,
+        mean_reversion=0.1,
+        initial_variance=0.0392,
+        long_run_variance=0.3156,
     )
     u = np.array([0.7, 3.0, 8.0, 2.0 - 0.5j, 10.0 - 0.5j])
-    exact = np.exp([
-        complex(oracle.log_transform_spot(z, 0.5, hurst=0.12, vol_of_vol=0.331, correlation=-0.681,
-                                          mean_reversion=0.1, initial_variance=0.0392,
-                                          long_run_variance=0.3156).value)
-        for z in u
-    ])
+    exact = np.exp(
+        [
+            complex(
+                oracle.log_transform_spot(
+                    z,
+                    0.5,
+                    hurst=0.12,
+                    vol_of_vol=0.331,
+                    correlation=-0.681,
+                    mean_reversion=0.1,
+                    initial_variance=0.0392,
+                    long_run_variance=0.3156,
+                ).value
+            )
+            for z in u
+        ]
+    )
     for tolerance in (1e-3, 1e-4, 1e-5, 1e-6):
-        value, info = model.characteristic_function(u, 0.5, tolerance=tolerance, scheme="adams",
-                                                    full_output=True)
+        value, info = model.characteristic_function(
+            u, 0.5, tolerance=tolerance, scheme="adams", full_output=True
+        )
         error = np.abs(value - exact)
         assert np.all(error <= info.error_estimate)
         assert np.all(info.error_estimate <= 1.01 * tolerance)
     for steps in (50, 200, 800):
-        value, info = model.characteristic_function(u, 0.5, scheme="adams", steps=steps,
-                                                    full_output=True)
+        value, info = model.characteristic_function(
+            u, 0.5, scheme="adams", steps=steps, full_output=True
+        )
         assert np.all(np.abs(value - exact) <= info.error_estimate)
 
 
@@ -143,7 +180,8 @@ def test_kernel_equivalence_and_pickle():
     assert a.characteristic_function(3.0, 1.0) == b.characteristic_function(3.0, 1.0)
     again = pickle.loads(pickle.dumps(ROUGH))
     assert again.characteristic_function(3.0, 1.0, tolerance=1e-4) == (
-        ROUGH.characteristic_function(3.0, 1.0, tolerance=1e-4))
+        ROUGH.characteristic_function(3.0, 1.0, tolerance=1e-4)
+    )
 
 
 def test_moments_outside_the_strip():
@@ -151,8 +189,12 @@ def test_moments_outside_the_strip():
     # based on Fourier-cosine series expansions, SIAM J. Sci. Comput. 31, 2008) from the closed form
     # of Moment explosions in stochastic volatility models, Finance Stoch. 11, 2007: computed.
     model = pv.VolterraHeston.from_spot_variance(
-        pv.ConstantKernel(), vol_of_vol=0.5751, correlation=-0.5711, mean_reversion=1.5768,
-        initial_variance=0.0175, long_run_variance=0.0398,
+        pv.ConstantKernel(),
+        vol_of_vol=0.5751,
+        correlation=-0.5711,
+        mean_reversion=1.5768,
+        initial_variance=0.0175,
+        long_run_variance=0.0398,
     )
     for moment, time in ((20.0, 0.619044908851), (-5.0, 0.984375126517)):
         value = model.log_characteristic_function(-1j * moment, 0.999999 * time)
@@ -177,10 +219,16 @@ def test_moments_outside_the_strip():
         (lambda m: m.characteristic_function([[1.0]], 1.0), ValueError, "one-dimensional"),
         (lambda m: m.characteristic_function(1.0, 1.0, scheme="euler"), ValueError, "scheme must"),
         (lambda m: m.characteristic_function(1.0, 1.0, steps=10), ValueError, "steps needs"),
-        (lambda m: m.characteristic_function(1.0, 1.0, scheme="adams", steps=0), ValueError,
-         "steps must be at least 1"),
-        (lambda m: m.characteristic_function(1.0, 1.0, scheme="adams", steps=1.5), TypeError,
-         "steps must be an integer"),
+        (
+            lambda m: m.characteristic_function(1.0, 1.0, scheme="adams", steps=0),
+            ValueError,
+            "steps must be at least 1",
+        ),
+        (
+            lambda m: m.characteristic_function(1.0, 1.0, scheme="adams", steps=1.5),
+            TypeError,
+            "steps must be an integer",
+        ),
         (lambda m: m.characteristic_function(1.0, 1.0, tolerance=0.0), ValueError, "tolerance"),
     ],
 )
@@ -198,13 +246,24 @@ def test_bad_arguments(call, error, message):
         ({"mean_reversion": -1.0}, ValueError, "mean_reversion must be non-negative"),
         ({"kernel": 0.1}, TypeError, "kernel must be"),
         ({"forward_variance": 0.04}, TypeError, "forward_variance must be a ForwardVariance"),
-        ({"forward_variance": pv.ForwardVariance.driven(pv.FractionalKernel(0.2), 0.04, [1.0],
-                                                        [0.0])}, ValueError, "was driven by"),
+        (
+            {
+                "forward_variance": pv.ForwardVariance.driven(
+                    pv.FractionalKernel(0.2), 0.04, [1.0], [0.0]
+                )
+            },
+            ValueError,
+            "was driven by",
+        ),
     ],
 )
 def test_bad_parameters(arguments, error, message):
-    good = {"kernel": pv.FractionalKernel(0.1), "vol_of_vol": 0.3, "correlation": -0.7,
-            "forward_variance": CURVE}
+    good = {
+        "kernel": pv.FractionalKernel(0.1),
+        "vol_of_vol": 0.3,
+        "correlation": -0.7,
+        "forward_variance": CURVE,
+    }
     with pytest.raises(error, match=message):
         pv.VolterraHeston(**(good | arguments))
 
@@ -212,11 +271,13 @@ def test_bad_parameters(arguments, error, message):
 def test_negative_spot_variance_is_named():
     common = {"vol_of_vol": 0.3, "correlation": -0.7, "mean_reversion": 1.0}
     with pytest.raises(ValueError, match="initial_variance must be a variance"):
-        pv.VolterraHeston.from_spot_variance(pv.ConstantKernel(), initial_variance=-0.1,
-                                             long_run_variance=0.1, **common)
+        pv.VolterraHeston.from_spot_variance(
+            pv.ConstantKernel(), initial_variance=-0.1, long_run_variance=0.1, **common
+        )
     with pytest.raises(ValueError, match="long_run_variance must be a variance"):
-        pv.VolterraHeston.from_spot_variance(pv.ConstantKernel(), initial_variance=0.1,
-                                             long_run_variance=-0.1, **common)
+        pv.VolterraHeston.from_spot_variance(
+            pv.ConstantKernel(), initial_variance=0.1, long_run_variance=-0.1, **common
+        )
 
 
 def test_a_model_is_immutable():

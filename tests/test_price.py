@@ -10,8 +10,11 @@ import pyvolterra as pv
 
 def classical(vol_of_vol, correlation, mean_reversion, initial_variance, long_run_variance):
     return pv.VolterraHeston.from_spot_variance(
-        pv.ConstantKernel(), vol_of_vol=vol_of_vol, correlation=correlation,
-        mean_reversion=mean_reversion, initial_variance=initial_variance,
+        pv.ConstantKernel(),
+        vol_of_vol=vol_of_vol,
+        correlation=correlation,
+        mean_reversion=mean_reversion,
+        initial_variance=initial_variance,
         long_run_variance=long_run_variance,
     )
 
@@ -48,8 +51,14 @@ def test_lewis_model_at_a_short_maturity():
     model = classical(1.0, -0.5, 4.0, 0.04, 0.25)
     t = 0.01
     for strike, call, expected in LEWIS_SHORT:
-        value = model.price(strike, t, forward=100.0 * math.exp(-0.01 * t),
-                            discount=math.exp(-0.01 * t), call=call, tolerance=1e-14)
+        value = model.price(
+            strike,
+            t,
+            forward=100.0 * math.exp(-0.01 * t),
+            discount=math.exp(-0.01 * t),
+            call=call,
+            tolerance=1e-14,
+        )
         assert value == pytest.approx(expected, abs=1e-12)
 
 
@@ -71,19 +80,35 @@ def test_cos_paper_parameters():
         ((1.0, -0.3, 2.0, 0.09, 0.09), 5.0, 0.05, [(100, 34.9998, 4)]),
         # Simple and efficient simulation of the Heston stochastic volatility model, J. Comput.
         # Finance 11, 2008, cases I-III (memory, reproduced).
-        ((1.0, -0.9, 0.5, 0.04, 0.04), 10.0, 0.0, [(60, 44.330, 3), (100, 13.085, 3),
-                                                   (140, 0.296, 3)]),
-        ((0.9, -0.5, 0.3, 0.04, 0.04), 15.0, 0.0, [(60, 45.287, 3), (100, 16.649, 3),
-                                                   (140, 5.138, 3)]),
-        ((1.0, -0.3, 1.0, 0.09, 0.09), 5.0, 0.05, [(60, 56.575, 3), (100, 33.597, 3),
-                                                   (140, 18.157, 3)]),
+        (
+            (1.0, -0.9, 0.5, 0.04, 0.04),
+            10.0,
+            0.0,
+            [(60, 44.330, 3), (100, 13.085, 3), (140, 0.296, 3)],
+        ),
+        (
+            (0.9, -0.5, 0.3, 0.04, 0.04),
+            15.0,
+            0.0,
+            [(60, 45.287, 3), (100, 16.649, 3), (140, 5.138, 3)],
+        ),
+        (
+            (1.0, -0.3, 1.0, 0.09, 0.09),
+            5.0,
+            0.05,
+            [(60, 56.575, 3), (100, 33.597, 3), (140, 18.157, 3)],
+        ),
     ],
 )
 def test_published_prices_to_print(parameters, maturity, rate, expected):
     model = classical(*parameters)
     for strike, price, digits in expected:
-        value = model.price(strike, maturity, forward=100.0 * math.exp(rate * maturity),
-                            discount=math.exp(-rate * maturity))
+        value = model.price(
+            strike,
+            maturity,
+            forward=100.0 * math.exp(rate * maturity),
+            discount=math.exp(-rate * maturity),
+        )
         assert abs(value - price) <= 0.5000001 * 10.0**-digits
 
 
@@ -98,8 +123,12 @@ def test_published_prices_to_print(parameters, maturity, rate, expected):
 )
 def test_rough_prices_in_both_conventions(vol_of_vol, calls):
     model = pv.VolterraHeston.from_spot_variance(
-        pv.FractionalKernel(0.12), vol_of_vol=vol_of_vol, correlation=-0.681, mean_reversion=0.1,
-        initial_variance=0.0392, long_run_variance=0.3156,
+        pv.FractionalKernel(0.12),
+        vol_of_vol=vol_of_vol,
+        correlation=-0.681,
+        mean_reversion=0.1,
+        initial_variance=0.0392,
+        long_run_variance=0.3156,
     )
     value = model.price([0.8, 0.9, 1.0, 1.1, 1.2], 1.0, tolerance=1e-6)
     np.testing.assert_allclose(value, calls, rtol=0, atol=1e-6)
@@ -110,8 +139,12 @@ def test_at_the_money_skew_approaches_its_limit():
     # 10, 2019 (memory, rederived): skew T^(1/2-H) -> rho nu / (2 sqrt(V0) Gamma(H + 5/2)). Values
     # on the way: computed.
     model = pv.VolterraHeston.from_spot_variance(
-        pv.FractionalKernel(0.12), vol_of_vol=0.331, correlation=-0.681, mean_reversion=0.1,
-        initial_variance=0.0392, long_run_variance=0.3156,
+        pv.FractionalKernel(0.12),
+        vol_of_vol=0.331,
+        correlation=-0.681,
+        mean_reversion=0.1,
+        initial_variance=0.0392,
+        long_run_variance=0.3156,
     )
     limit = -0.681 * 0.331 / (2.0 * math.sqrt(0.0392) * math.gamma(2.62))
     assert limit == pytest.approx(-0.39221, abs=1e-5)
@@ -167,8 +200,11 @@ def test_an_unmet_tolerance_is_announced():
         ({"forward": math.nan}, ValueError, "forward must be finite"),
         ({"discount": 0.0}, ValueError, "discount must be positive"),
         ({"call": 1}, TypeError, "call must hold booleans"),
-        ({"strikes": [1.0, 2.0], "maturities": [1.0, 2.0, 3.0]}, ValueError,
-         r"shapes do not broadcast: strikes \(2,\), maturities \(3,\)"),
+        (
+            {"strikes": [1.0, 2.0], "maturities": [1.0, 2.0, 3.0]},
+            ValueError,
+            r"shapes do not broadcast: strikes \(2,\), maturities \(3,\)",
+        ),
         ({"tolerance": -1.0}, ValueError, "tolerance must be positive"),
     ],
 )
