@@ -137,7 +137,7 @@ def calibrate(
         solution.x,
         problem.bounds(),
         solution.fun,
-        solution.jac,
+        np.asarray(solution.jac),
         problem.forward_tangents(model, forwards),
         problem.parameter_map(solution.x),
     )
@@ -283,7 +283,7 @@ class _Problem:
         # log phi of the elementary curves at every expiry, and the coefficients of the real one.
         p = self.parameters(x)
         levels = np.array([p[f"drive_{k + 1}"] for k in range(self.curve_times.size)])
-        core_model = tuple(p[name] for name in SHAPE)
+        core_model = (p["hurst"], p["vol_of_vol"], p["correlation"], p["mean_reversion"])
         core_curve = (True, p["initial_variance"], self.curve_times, levels)
         self.evaluations += 1
         rows = [

@@ -11,6 +11,9 @@ from . import _core
 from ._validation import finite_number, finite_reals, require
 from .kernels import FractionalKernel, Kernel
 
+# The form in which a curve crosses the border: driven?, initial variance, times, levels.
+CoreCurve = tuple[bool, float, NDArray[np.float64], NDArray[np.float64]]
+
 
 @dataclass(frozen=True, eq=False)
 class ForwardVariance:
@@ -35,7 +38,7 @@ class ForwardVariance:
     kernel: Kernel | None = None
     initial_variance: float = 0.0
     mean_reversion: float = 0.0
-    _arguments: tuple[object, ...] = field(init=False, repr=False)
+    _arguments: CoreCurve = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
         self.times.setflags(write=False)

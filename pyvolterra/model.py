@@ -1,7 +1,9 @@
 """The affine Volterra model of one rough variance factor: transforms, prices, volatilities."""
 
+import sys
 import warnings
 from dataclasses import dataclass
+from types import FrameType
 from typing import Any, Self
 
 import numpy as np
@@ -267,11 +269,12 @@ class VolterraHeston:
                 stacklevel=_outside_package(),
             )
         shape = times.shape + nodes.shape
-        if shape == ():
-            values, errors = complex(values[0, 0]), float(errors[0, 0])
-        else:
-            values, errors = values.reshape(shape), errors.reshape(shape)
-        return (values, TransformInfo(errors, scheme)) if full_output else values
+        result: Any = values.reshape(shape) if shape else complex(values[0, 0])
+        if not full_output:
+            return result
+        return result, TransformInfo(
+            errors.reshape(shape) if shape else float(errors[0, 0]), scheme
+        )
 
     def characteristic_function(
         self,
@@ -413,10 +416,9 @@ def _positive_arrays(**arguments: ArrayLike) -> tuple[NDArray[np.float64], ...]:
 
 
 def _outside_package() -> int:
-    """Stack level of the first caller outside this module, so that a warning points at it."""
-    import sys
-
-    level, frame = 1, sys._getframe(1)
+    """Stack level of the first caller outside the package, so that a warning points at it."""
+    level = 1
+    frame: FrameType | None = sys._getframe(1)
     while frame is not None and frame.f_globals.get("__name__", "").startswith("pyvolterra."):
-        level, frame = level + 1, frame.f_back  # type: ignore[assignment]
+        level, frame = level + 1, frame.f_back
     return level

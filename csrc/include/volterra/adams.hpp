@@ -2,20 +2,23 @@
 //
 //   psi = K * F,  F = c0 + c1 psi + c2 psi^2
 //
-// One block holds `adams_lanes` values of u in split real and imaginary rows. History sums are
-// taken in two parts: what lies before the current block of `time_block` steps is a dense product
-// of Toeplitz weights with the stored F (register tiles, chunks that stay in the first-level
-// cache), what lies inside it is added step by step. The corrector is a quadratic in one unknown
-// and is solved in closed form: no predictor is needed and nothing overflows where the explicit
-// predictor would.
+// One block holds `adams_lanes` values of u in split real and imaginary rows. The history sums are
+// a triangular Toeplitz product in time. It is cut into squares: once 2^k leaves of 16 nodes are
+// known, their share in the next 2^k leaves is added at one go (toeplitz.hpp), in register tiles
+// and from cache; only within a leaf are terms added step by step. The corrector is a quadratic in
+// one unknown and is solved in closed form: no predictor is needed and nothing overflows where the
+// explicit predictor would.
 //
-// Memory: (steps + 1) x 2 x adams_lanes doubles per block, whatever the number of u.
+// Memory: about 6 x steps x adams_lanes doubles per block, whatever the number of u.
 // No allocation, no exceptions, no standard-library templates here: see simd.hpp.
 #pragma once
 
 #include "volterra/simd.hpp"
+#include "volterra/toeplitz.hpp"
 
 namespace volterra {
+
+inline constexpr std::size_t adams_most_levels = 24;
 
 // One block's work order. All rows are split: `lanes` real parts, then `lanes` imaginary parts.
 struct adams_block {
@@ -24,69 +27,119 @@ struct adams_block {
     double c2;
     std::size_t steps;
     double diagonal_weight;
-    const double* lag_weights;    // [1 .. steps - 1], see fractional_weights.hpp
+    const double* lag_weights;    // [1 .. adams_padded(steps)], see fractional_weights.hpp
     const double* first_weights;  // [1 .. steps]
+    const double* const* leaves;  // leaves[k]: of the square of 16 2^k nodes, for all that fit
     std::size_t functionals;      // how many linear functionals of (F, psi) are wanted
     const double* weights_f;      // functionals x (steps + 1)
     const double* weights_psi;    // functionals x (steps + 1)
     double* values;               // functionals x 2 x lanes: sum_n wF_n F_n + wpsi_n psi_n
     double* psi;                  // (steps + 1) x 2 x lanes, or null
-    double* history;              // workspace: adams_workspace(steps, lanes) doubles
+    double* workspace;            // adams_workspace(steps, lanes) doubles
 };
 
-inline constexpr std::size_t adams_time_block = 16;
+// Steps rounded up to whole leaves.
+inline constexpr std::size_t adams_padded(std::size_t steps) {
+    return (steps + toeplitz_leaf - 1) / toeplitz_leaf * toeplitz_leaf;
+}
 
-// Doubles of workspace for one block: F at every node, and the history sums of one time block.
+// Doubles of workspace for one block: F and the history sums at every node, and the scratch of the
+// largest square, which has at most half the nodes.
 inline constexpr std::size_t adams_workspace(std::size_t steps, std::size_t lanes) {
-    return (steps + 1 + adams_time_block) * 2 * lanes;
+    return (3 * adams_padded(steps) + 2 * toeplitz_leaf) * 2 * lanes;
 }
 
 }  // namespace volterra
 
 namespace volterra::VOLTERRA_TARGET {
 
-inline constexpr std::size_t adams_lanes = 4 * pack_width;
+// Two packs of real parts and two of imaginary ones fill a row of a register tile.
+inline constexpr std::size_t adams_lanes = (vector_registers == 32 ? 2 : 4) * pack_width;
 
 namespace adams_detail {
 
 inline constexpr std::size_t lanes = adams_lanes;
 inline constexpr std::size_t row = 2 * lanes;
 inline constexpr std::size_t packs = row / pack_width;
+inline constexpr std::size_t leaf = toeplitz_leaf;
 
-// sums[r] += sum_{j in [begin, end)} lag[first_lag + r - j + begin] F_j for `rows` rows r.
-// Register tile: `rows` x `columns` accumulators.
+// sums[r] += sum_j weights[r - j] x[j], r < rows, j < count: a register tile.
 template <std::size_t rows, std::size_t columns>
-VOLTERRA_INLINE void accumulate_tile(double* sums, const double* lag, std::size_t first_lag,
-                                     const double* f, std::size_t count) {
+VOLTERRA_INLINE void accumulate_tile(double* sums, const double* weights, const double* x,
+                                     std::size_t count) {
     pack acc[rows][columns];
     for (std::size_t r = 0; r < rows; ++r)
         for (std::size_t c = 0; c < columns; ++c) acc[r][c] = load(sums + r * row + c * pack_width);
     for (std::size_t j = 0; j < count; ++j) {
-        pack x[columns];
-        for (std::size_t c = 0; c < columns; ++c) x[c] = load(f + j * row + c * pack_width);
+        pack value[columns];
+        for (std::size_t c = 0; c < columns; ++c) value[c] = load(x + j * row + c * pack_width);
         for (std::size_t r = 0; r < rows; ++r) {
-            const pack w = broadcast(lag[first_lag + r - j]);
-            for (std::size_t c = 0; c < columns; ++c) acc[r][c] += w * x[c];
+            const pack w = broadcast(*(weights + r - j));
+            for (std::size_t c = 0; c < columns; ++c) acc[r][c] += w * value[c];
         }
     }
     for (std::size_t r = 0; r < rows; ++r)
         for (std::size_t c = 0; c < columns; ++c) store(sums + r * row + c * pack_width, acc[r][c]);
 }
 
-// History of nodes 1 .. begin - 1 at the steps begin .. begin + adams_time_block - 1.
-inline void accumulate_history(double* sums, const double* lag, const double* f,
-                               std::size_t begin) {
-    constexpr std::size_t chunk = 32;  // nodes per pass: their F stays in the first-level cache
-    constexpr std::size_t tile_rows = 4;
-    constexpr std::size_t tile_columns = vector_registers == 32 ? 4 : 2;
-    for (std::size_t j = 1; j < begin; j += chunk) {
-        const std::size_t count = begin - j < chunk ? begin - j : chunk;
-        for (std::size_t r = 0; r < adams_time_block; r += tile_rows)
-            for (std::size_t c = 0; c < packs; c += tile_columns)
-                accumulate_tile<tile_rows, tile_columns>(sums + r * row + c * pack_width, lag,
-                                                         begin + r - j,
-                                                         f + j * row + c * pack_width, count);
+// `count` nodes x to one leaf of sums; weights[r - j] as above.
+inline void accumulate_leaf(double* sums, const double* weights, const double* x,
+                            std::size_t count) {
+    constexpr std::size_t rows = 4, columns = vector_registers == 32 ? 4 : 2;
+    for (std::size_t r = 0; r < leaf; r += rows)
+        for (std::size_t c = 0; c < packs; c += columns)
+            accumulate_tile<rows, columns>(sums + r * row + c * pack_width, weights + r,
+                                           x + c * pack_width, count);
+}
+
+VOLTERRA_INLINE void add_rows(double* to, const double* from, std::size_t count) {
+    for (std::size_t i = 0; i < count * row; i += pack_width)
+        store(to + i, load(to + i) + load(from + i));
+}
+
+// sums += T x for a square of `size` nodes; returns the first leaf after those of the square.
+inline const double* accumulate_square(const double* leaves, std::size_t size, const double* x,
+                                       double* sums, double* scratch) {
+    if (size == leaf) {
+        accumulate_leaf(sums, leaves + leaf - 1, x, leaf);
+        return leaves + toeplitz_stride;
     }
+    const std::size_t half = size / 2;
+    double* const both = scratch;
+    double* const middle = scratch + half * row;
+    double* const rest = scratch + size * row;
+    std::memcpy(both, x, half * row * sizeof(double));
+    add_rows(both, x + half * row, half);
+    std::memset(middle, 0, half * row * sizeof(double));
+    leaves = accumulate_square(leaves, half, both, middle, rest);
+    leaves = accumulate_square(leaves, half, x + half * row, sums, rest);
+    leaves = accumulate_square(leaves, half, x, sums + half * row, rest);
+    add_rows(sums, middle, half);
+    add_rows(sums + half * row, middle, half);
+    return leaves;
+}
+
+// Adds the share of the last lowbit(done) leaves to the leaves after them, `leaves_left` of which
+// are wanted. A square that reaches far beyond the last step is cheaper done plainly.
+inline void pass_on_history(const adams_block& block, std::size_t done, std::size_t leaves_left,
+                            const double* f, double* sums, double* scratch) {
+    const std::size_t count = done & (~done + 1);
+    std::size_t level = 0;
+    double saving = 1.0;
+    for (std::size_t n = count; n > 1; n /= 2) ++level, saving *= 0.75;
+    const std::size_t begin = done * leaf, size = count * leaf;
+    const double* const x = f + (begin - size) * row;
+    if (static_cast<double>(leaves_left) >= saving * static_cast<double>(count) &&
+        leaves_left * 2 > count && block.leaves[level]) {
+        accumulate_square(block.leaves[level], size, x, sums + begin * row, scratch);
+        return;
+    }
+    const std::size_t wanted = leaves_left < count ? leaves_left : count;
+    for (std::size_t source = 0; source < count; ++source)
+        for (std::size_t target = 0; target < wanted; ++target)
+            accumulate_leaf(sums + (begin + target * leaf) * row,
+                            block.lag_weights + size + (target - source) * leaf,
+                            x + source * leaf * row, leaf);
 }
 
 VOLTERRA_INLINE complex_pack load_complex(const double* p) { return {load(p), load(p + lanes)}; }
@@ -97,13 +150,15 @@ VOLTERRA_INLINE void store_complex(double* p, complex_pack z) {
 
 }  // namespace adams_detail
 
-// Solves one block. `lag_weights` must be readable up to index steps + adams_time_block: rows past
-// the last step are computed and dropped.
+// Solves one block.
 inline void solve_adams_block(const adams_block& block) {
     using namespace adams_detail;
-    double* const f = block.history;
-    double* const sums = block.history + (block.steps + 1) * row;
+    const std::size_t padded = adams_padded(block.steps), leaves = padded / leaf;
+    double* const f = block.workspace;  // F at the nodes 1, 2, ...
+    double* const sums = f + padded * row;
+    double* const scratch = sums + padded * row;
     const pack w = broadcast(block.diagonal_weight);
+    const pack c2 = broadcast(block.c2);
 
     auto add_to_functionals = [&](std::size_t n, std::size_t c, complex_pack f_n, complex_pack psi_n) {
         for (std::size_t m = 0; m < block.functionals; ++m) {
@@ -115,39 +170,41 @@ inline void solve_adams_block(const adams_block& block) {
     };
 
     std::memset(block.values, 0, block.functionals * row * sizeof(double));
-    std::memcpy(f, block.c0, row * sizeof(double));  // psi_0 = 0, F_0 = c0
+    std::memset(sums, 0, padded * row * sizeof(double));
     if (block.psi) std::memset(block.psi, 0, row * sizeof(double));
-    for (std::size_t c = 0; c < lanes; c += pack_width)
+    for (std::size_t c = 0; c < lanes; c += pack_width)  // psi_0 = 0, F_0 = c0
         add_to_functionals(0, c, load_complex(block.c0 + c), {broadcast(0.0), broadcast(0.0)});
 
-    for (std::size_t begin = 1; begin <= block.steps; begin += adams_time_block) {
-        const std::size_t left = block.steps + 1 - begin;
-        const std::size_t count = left < adams_time_block ? left : adams_time_block;
-        std::memset(sums, 0, adams_time_block * row * sizeof(double));
-        accumulate_history(sums, block.lag_weights, f, begin);
-        for (std::size_t i = 0; i < count; ++i) {
-            const std::size_t n = begin + i;
-            double* const sum = sums + i * row;
-            for (std::size_t c = 0; c < row; c += pack_width) {
-                pack acc = load(sum + c) + block.first_weights[n] * load(f + c);
-                for (std::size_t j = begin; j < n; ++j)
-                    acc += block.lag_weights[n - j] * load(f + j * row + c);
-                store(sum + c, acc);
+    for (std::size_t done = 0; done < leaves; ++done) {
+        if (done) pass_on_history(block, done, leaves - done, f, sums, scratch);
+        const std::size_t begin = done * leaf;  // row of the first node of this leaf
+        for (std::size_t i = 0; i < leaf && begin + i < block.steps; ++i) {
+            const std::size_t n = begin + i + 1;
+            double* const sum = sums + (begin + i) * row;
+            double* const f_n = f + (begin + i) * row;
+            pack acc[packs];
+            const pack first = broadcast(block.first_weights[n]);
+            for (std::size_t c = 0; c < packs; ++c)
+                acc[c] = load(sum + c * pack_width) + first * load(block.c0 + c * pack_width);
+            for (std::size_t j = 0; j < i; ++j) {
+                const pack lag = broadcast(block.lag_weights[i - j]);
+                for (std::size_t c = 0; c < packs; ++c)
+                    acc[c] += lag * load(f + (begin + j) * row + c * pack_width);
             }
-            for (std::size_t c = 0; c < lanes; c += pack_width) {
+            for (std::size_t k = 0; k < packs / 2; ++k) {
                 // psi = r + w (c0 + c1 psi + c2 psi^2): the root with Re(1 - w F'(psi)) >= 0 is the
                 // stable one and the one that continues w = 0, hence the root nearest to any
                 // accurate predictor.
+                const std::size_t c = k * pack_width;
                 const complex_pack c0 = load_complex(block.c0 + c);
                 const complex_pack c1 = load_complex(block.c1 + c);
-                const complex_pack e = load_complex(sum + c) + w * c0;
+                const complex_pack e = complex_pack{acc[k], acc[packs / 2 + k]} + w * c0;
                 const complex_pack q = {1.0 - w * c1.re, -w * c1.im};
-                const complex_pack root = sqrt(q * q - (4.0 * w * block.c2) * e);
-                const complex_pack psi = (broadcast(2.0) * e) / (q + root);
-                const complex_pack f_n = c0 + (c1 + broadcast(block.c2) * psi) * psi;
-                store_complex(f + n * row + c, f_n);
+                const complex_pack psi = quadratic_root(e, q, q * q - (4.0 * w * c2) * e);
+                const complex_pack value = c0 + (c1 + c2 * psi) * psi;
+                store_complex(f_n + c, value);
                 if (block.psi) store_complex(block.psi + n * row + c, psi);
-                add_to_functionals(n, c, f_n, psi);
+                add_to_functionals(n, c, value, psi);
             }
         }
     }

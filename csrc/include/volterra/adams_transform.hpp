@@ -18,12 +18,22 @@
 
 namespace volterra {
 
-// The step weights of one mesh, padded as the kernel requires.
-inline uniform_weights padded_weights(double alpha, double maturity, std::size_t steps) {
-    auto weights = fractional_weights(alpha, maturity / static_cast<double>(steps), steps);
-    weights.lag.resize(steps + adams_time_block + 1, 0.0);
-    return weights;
-}
+// Everything the kernel needs to know of one mesh.
+struct adams_mesh {
+    uniform_weights weights;
+    std::vector<std::vector<double>> squares;
+    const double* leaves[adams_most_levels] = {};
+
+    adams_mesh(double alpha, double maturity, std::size_t steps)
+        : weights(fractional_weights(alpha, maturity / static_cast<double>(steps),
+                                     std::max<std::size_t>(steps, 2))) {
+        weights.lag.resize(2 * adams_padded(steps) + 1, 0.0);
+        for (std::size_t size = toeplitz_leaf; size < steps; size *= 2) {
+            squares.push_back(toeplitz_leaves(weights.lag, size));
+            leaves[squares.size() - 1] = squares.back().data();
+        }
+    }
+};
 
 // values[m * u.size() + i]: functional m at u[i], on a mesh of exactly `steps` steps.
 // psi, when not empty: (steps + 1) x u.size(), psi at every node.
@@ -33,9 +43,9 @@ inline void solve_adams(const target_kernels& kernels, const model_parameters& m
                         std::span<std::complex<double>> values,
                         std::span<std::complex<double>> psi = {}) {
     const std::size_t lanes = kernels.adams_lanes, row = 2 * lanes;
-    const auto weights = padded_weights(m.alpha(), maturity, steps);
+    const adams_mesh mesh(m.alpha(), maturity, steps);
     std::vector<double> c0(row), c1(row), block_values(rows.count * row);
-    std::vector<double> history(adams_workspace(steps, lanes));
+    std::vector<double> workspace(adams_workspace(steps, lanes));
     std::vector<double> block_psi(psi.empty() ? 0 : (steps + 1) * row);
     for (std::size_t start = 0; start < u.size(); start += lanes) {
         const std::size_t count = std::min(lanes, u.size() - start);
@@ -46,10 +56,10 @@ inline void solve_adams(const target_kernels& kernels, const model_parameters& m
             c1[i] = c.c1.real(), c1[lanes + i] = c.c1.imag();
             c2 = c.c2;
         }
-        kernels.solve_adams_block({c0.data(), c1.data(), c2, steps, weights.diagonal,
-                                   weights.lag.data(), weights.first.data(), rows.count,
-                                   rows.f.data(), rows.psi.data(), block_values.data(),
-                                   psi.empty() ? nullptr : block_psi.data(), history.data()});
+        kernels.solve_adams_block({c0.data(), c1.data(), c2, steps, mesh.weights.diagonal,
+                                   mesh.weights.lag.data(), mesh.weights.first.data(), mesh.leaves,
+                                   rows.count, rows.f.data(), rows.psi.data(), block_values.data(),
+                                   psi.empty() ? nullptr : block_psi.data(), workspace.data()});
         auto unpack = [&](const double* from, std::complex<double>* to) {
             for (std::size_t i = 0; i < count; ++i) to[i] = {from[i], from[lanes + i]};
         };

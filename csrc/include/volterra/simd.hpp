@@ -81,13 +81,17 @@ VOLTERRA_INLINE complex_pack operator/(complex_pack a, complex_pack b) {
     return {(a.re * b.re + a.im * b.im) * scale, (a.im * b.re - a.re * b.im) * scale};
 }
 
-// Principal square root (real part >= 0) by the half-angle formula, stable on both half planes.
-VOLTERRA_INLINE complex_pack sqrt(complex_pack z) {
-    const pack modulus = sqrt(z.re * z.re + z.im * z.im);
-    const pack larger = sqrt(0.5 * (modulus + abs(z.re)));
-    const pack smaller = larger > 0.0 ? 0.5 * z.im / larger : broadcast(0.0);
+// 2 e / (q + sqrt(z)), principal square root: the root of smaller modulus of a quadratic in its
+// cancellation-free form. With l = sqrt((|z| + |Re z|)/2) the square root is (l, Im z / (2l)) on the
+// right half plane and (|Im z| / (2l), +-l) on the left; numerator and denominator are multiplied by
+// l, which leaves a single division.
+VOLTERRA_INLINE complex_pack quadratic_root(complex_pack e, complex_pack q, complex_pack z) {
+    const pack half = 0.5 * (sqrt(z.re * z.re + z.im * z.im) + abs(z.re));  // l^2
+    const pack l = half > 0.0 ? sqrt(half) : broadcast(1.0);
     const auto right = z.re >= 0.0;
-    return {right ? larger : abs(smaller), right ? smaller : (z.im < 0.0 ? -larger : larger)};
+    const pack re = right ? half : 0.5 * abs(z.im);
+    const pack im = right ? 0.5 * z.im : (z.im < 0.0 ? -half : half);
+    return ((2.0 * l) * e) / complex_pack{l * q.re + re, l * q.im + im};
 }
 
 }  // namespace volterra::VOLTERRA_TARGET
