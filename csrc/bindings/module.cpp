@@ -2,6 +2,7 @@
 #include <pybind11/pybind11.h>
 
 namespace volterra::bindings {
+void bind_black(pybind11::module_&);
 void bind_build_info(pybind11::module_&);
 void bind_price(pybind11::module_&);
 void bind_resolvents(pybind11::module_&);
@@ -15,4 +16,5 @@ PYBIND11_MODULE(_core, module) {
     bind_resolvents(module);
     bind_transform(module);
     bind_price(module);
+    bind_black(module);
 }
