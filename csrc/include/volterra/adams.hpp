@@ -9,7 +9,7 @@
 // one unknown and is solved in closed form: no predictor is needed and nothing overflows where the
 // explicit predictor would.
 //
-// Memory: about 6 x steps x adams_lanes doubles per block, whatever the number of u.
+// Memory: 6 to 10 x steps x adams_lanes doubles per block, whatever the number of u.
 // No allocation, no exceptions, no standard-library templates here: see simd.hpp.
 #pragma once
 
@@ -35,7 +35,7 @@ struct adams_block {
     const double* weights_psi;    // functionals x (steps + 1)
     double* values;               // functionals x 2 x lanes: sum_n wF_n F_n + wpsi_n psi_n
     double* psi;                  // (steps + 1) x 2 x lanes, or null
-    double* workspace;            // adams_workspace(steps, lanes) doubles
+    double* workspace;            // adams_workspace(steps, lanes) doubles, aligned to 64 bytes
 };
 
 // Steps rounded up to whole leaves.
@@ -43,17 +43,28 @@ inline constexpr std::size_t adams_padded(std::size_t steps) {
     return (steps + toeplitz_leaf - 1) / toeplitz_leaf * toeplitz_leaf;
 }
 
-// Doubles of workspace for one block: F and the history sums at every node, and the scratch of the
-// largest square, which has at most half the nodes.
+// The end of the last square: a leaf times a power of two.
+inline constexpr std::size_t adams_reach(std::size_t steps) {
+    std::size_t reach = toeplitz_leaf;
+    while (reach < steps) reach *= 2;
+    return reach;
+}
+
+// Doubles of workspace for one block: F at every node, the history sums as far as squares reach,
+// and the scratch of the largest square, which holds at most half of that.
 inline constexpr std::size_t adams_workspace(std::size_t steps, std::size_t lanes) {
-    return (3 * adams_padded(steps) + 2 * toeplitz_leaf) * 2 * lanes;
+    return (adams_padded(steps) + 2 * adams_reach(steps)) * 2 * lanes;
 }
 
 }  // namespace volterra
 
 namespace volterra::VOLTERRA_TARGET {
 
-// Two packs of real parts and two of imaginary ones fill a row of a register tile.
+// Register tiles, rows x packs, by measurement: accumulators, inputs and weights must fit into the
+// registers, and enough accumulators be in flight to hide the latency of multiply-add.
+inline constexpr std::size_t adams_rows = pack_width == 2 && vector_registers == 16 ? 2 : 4;
+inline constexpr std::size_t adams_columns = pack_width == 4 ? 2 : 4;
+// Values of u in a block: its rows are one or more tiles wide.
 inline constexpr std::size_t adams_lanes = (vector_registers == 32 ? 2 : 4) * pack_width;
 
 namespace adams_detail {
@@ -85,7 +96,7 @@ VOLTERRA_INLINE void accumulate_tile(double* sums, const double* weights, const 
 // `count` nodes x to one leaf of sums; weights[r - j] as above.
 inline void accumulate_leaf(double* sums, const double* weights, const double* x,
                             std::size_t count) {
-    constexpr std::size_t rows = 4, columns = vector_registers == 32 ? 4 : 2;
+    constexpr std::size_t rows = adams_rows, columns = adams_columns;
     for (std::size_t r = 0; r < leaf; r += rows)
         for (std::size_t c = 0; c < packs; c += columns)
             accumulate_tile<rows, columns>(sums + r * row + c * pack_width, weights + r,
@@ -154,9 +165,10 @@ VOLTERRA_INLINE void store_complex(double* p, complex_pack z) {
 inline void solve_adams_block(const adams_block& block) {
     using namespace adams_detail;
     const std::size_t padded = adams_padded(block.steps), leaves = padded / leaf;
+    const std::size_t reach = adams_reach(block.steps);
     double* const f = block.workspace;  // F at the nodes 1, 2, ...
     double* const sums = f + padded * row;
-    double* const scratch = sums + padded * row;
+    double* const scratch = sums + reach * row;
     const pack w = broadcast(block.diagonal_weight);
     const pack c2 = broadcast(block.c2);
 
@@ -170,7 +182,7 @@ inline void solve_adams_block(const adams_block& block) {
     };
 
     std::memset(block.values, 0, block.functionals * row * sizeof(double));
-    std::memset(sums, 0, padded * row * sizeof(double));
+    std::memset(sums, 0, reach * row * sizeof(double));
     if (block.psi) std::memset(block.psi, 0, row * sizeof(double));
     for (std::size_t c = 0; c < lanes; c += pack_width)  // psi_0 = 0, F_0 = c0
         add_to_functionals(0, c, load_complex(block.c0 + c), {broadcast(0.0), broadcast(0.0)});

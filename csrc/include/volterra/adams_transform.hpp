@@ -12,6 +12,7 @@
 #include <vector>
 
 #include "targets.hpp"
+#include "volterra/aligned_buffer.hpp"
 #include "volterra/fractional_weights.hpp"
 #include "volterra/model.hpp"
 #include "volterra/uniform_functional.hpp"
@@ -27,7 +28,7 @@ struct adams_mesh {
     adams_mesh(double alpha, double maturity, std::size_t steps)
         : weights(fractional_weights(alpha, maturity / static_cast<double>(steps),
                                      std::max<std::size_t>(steps, 2))) {
-        weights.lag.resize(2 * adams_padded(steps) + 1, 0.0);
+        weights.lag.resize(2 * adams_reach(steps) + 1, 0.0);
         for (std::size_t size = toeplitz_leaf; size < steps; size *= 2) {
             squares.push_back(toeplitz_leaves(weights.lag, size));
             leaves[squares.size() - 1] = squares.back().data();
@@ -44,8 +45,8 @@ inline void solve_adams(const target_kernels& kernels, const model_parameters& m
                         std::span<std::complex<double>> psi = {}) {
     const std::size_t lanes = kernels.adams_lanes, row = 2 * lanes;
     const adams_mesh mesh(m.alpha(), maturity, steps);
+    const auto workspace = make_aligned_buffer(adams_workspace(steps, lanes));
     std::vector<double> c0(row), c1(row), block_values(rows.count * row);
-    std::vector<double> workspace(adams_workspace(steps, lanes));
     std::vector<double> block_psi(psi.empty() ? 0 : (steps + 1) * row);
     for (std::size_t start = 0; start < u.size(); start += lanes) {
         const std::size_t count = std::min(lanes, u.size() - start);
@@ -59,7 +60,7 @@ inline void solve_adams(const target_kernels& kernels, const model_parameters& m
         kernels.solve_adams_block({c0.data(), c1.data(), c2, steps, mesh.weights.diagonal,
                                    mesh.weights.lag.data(), mesh.weights.first.data(), mesh.leaves,
                                    rows.count, rows.f.data(), rows.psi.data(), block_values.data(),
-                                   psi.empty() ? nullptr : block_psi.data(), workspace.data()});
+                                   psi.empty() ? nullptr : block_psi.data(), workspace.get()});
         auto unpack = [&](const double* from, std::complex<double>* to) {
             for (std::size_t i = 0; i < count; ++i) to[i] = {from[i], from[lanes + i]};
         };

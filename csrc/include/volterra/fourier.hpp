@@ -12,6 +12,7 @@
 // exponential Levy processes (2001, SSRN 282110; from memory), with a control variate.
 #pragma once
 
+#include <algorithm>
 #include <cmath>
 #include <complex>
 #include <cstddef>
@@ -49,8 +50,8 @@ public:
                 factors_[i * n + j] = {scale * line_.weights[j] * std::cos(angle),
                                        scale * line_.weights[j] * std::sin(angle)};
             }
-            const double stdev = std::sqrt(total_variance_);
-            control_[i] = normalised_black(-std::abs(k_[i]), stdev) * std::exp(0.5 * k_[i]);
+            control_[i] = out_of_the_money_price(std::abs(k_[i]), std::sqrt(total_variance_)) *
+                          std::exp(std::min(k_[i], 0.0));
         }
     }
 
