@@ -215,7 +215,7 @@ def read_quotes(path: str | os.PathLike[str], *, strict: bool = False) -> Quotes
 
     Notes
     -----
-    About 0.5 s for 100,000 rows of CSV. Rows with another quote time than the majority's are set
+    About 1 s for 100,000 rows. Rows with another quote time than the majority's are set
     aside. Thread-safe.
     """
     file = Path(os.fspath(path))
