@@ -36,6 +36,8 @@ RATE_SCALES = np.array([4.0, 1.0, 0.25])
 RATE_PRIOR = np.array([0.10, 0.03, 0.02, 0.005])
 # Each expiry may depart from such a curve by about 1 basis point: common practice, no source.
 RATE_MISFIT = 1e-4
+# A larger zero rate, of either sign, means that calls and puts are not what they are said to be.
+MAX_RATE = 1.0
 # Uncertainty of an interpolated carry per year: common practice, no source.
 CARRY_ERROR = 0.005
 
@@ -118,14 +120,14 @@ def _maturities(maturity: ArrayLike) -> FloatArray:
 def _linear(x: FloatArray, nodes: FloatArray, values: FloatArray) -> FloatArray:
     # Linear interpolation that goes on outside with the slope of the nearest segment.
     if nodes.size == 1:
-        return values[0] + 0.0 * x
+        return np.broadcast_to(values[0], x.shape)
     left = np.clip(np.searchsorted(nodes, x, side="right") - 1, 0, nodes.size - 2)
     share = (x - nodes[left]) / (nodes[left + 1] - nodes[left])
     result: FloatArray = (1.0 - share) * values[left] + share * values[left + 1]
     return result
 
 
-@dataclass
+@dataclass(eq=False)
 class _Line:
     """The pairs of one expiry and the robust line through them."""
 
@@ -139,7 +141,8 @@ class _Line:
 
     def weights(self, residual: FloatArray) -> FloatArray:
         u = residual / (BIWEIGHT * self.scale * self.half_width)
-        return self.emphasis / self.half_width**2 * np.maximum(1.0 - u * u, 0.0) ** 2
+        trust: FloatArray = np.maximum(1.0 - u * u, 0.0) ** 2
+        return self.emphasis / self.half_width**2 * trust
 
 
 def infer_forwards(quotes: Quotes) -> ForwardCurve:
@@ -159,7 +162,8 @@ def infer_forwards(quotes: Quotes) -> ForwardCurve:
     Raises
     ------
     QuoteError
-        If no expiry has at least 5 strikes with both a call and a put.
+        If no expiry has at least 5 strikes with both a call and a put, or parity gives a forward
+        that is not positive or a rate beyond 100 % (calls and puts mixed up, units that differ).
 
     Notes
     -----
@@ -182,24 +186,29 @@ def infer_forwards(quotes: Quotes) -> ForwardCurve:
             f"{quotes.source}: forwards need an expiry with at least {MIN_PAIRS} strikes that have "
             f"both a usable call and a usable put; the best has {best}"
         )
-    slopes = [_start(line) for line in regressed]
+    starts = {line.expiry: _start(line) for line in regressed}
     pooled = float(np.median([line.scale for line in regressed]))
-    for line in lines:
-        own = line.strike.size if np.isfinite(line.scale) else 0
+    slope, slope_error = np.full(len(lines), np.nan), np.full(len(lines), np.inf)
+    for i, line in enumerate(lines):
+        own = line.strike.size if line.expiry in starts else 0
         known = own * line.scale**2 if own else 0.0
         line.scale = float(np.sqrt((known + POOLED_PAIRS * pooled**2) / (own + POOLED_PAIRS)))
-
+        if own:
+            slope[i], slope_error[i] = _fit_slope(line, starts[line.expiry])
     maturity = np.array([line.maturity for line in lines])
-    slope, slope_error = np.full(len(lines), np.nan), np.full(len(lines), np.inf)
-    for line, first in zip(regressed, slopes, strict=True):
-        at = lines.index(line)
-        slope[at], slope_error[at] = _fit_slope(line, first)
     rates, rate_errors = _rate_curve(maturity, slope, slope_error)
     points = []
     for line, rate, rate_error in zip(lines, rates, rate_errors, strict=True):
         discount = float(np.exp(-line.maturity * rate))
         discount_error = line.maturity * discount * float(rate_error)
         forward, error = _fit_forward(line, discount, discount_error)
+        if abs(rate) > MAX_RATE or forward <= 0.0:
+            raise QuoteError(
+                f"{quotes.source}: at expiry {line.expiry}Z put-call parity gives the forward "
+                f"{forward:.6g} and the discount factor {discount:.6g}, must be positive and of a "
+                f"rate within {MAX_RATE:.0%}; are calls and puts mixed up, or the units of strikes "
+                "and prices different?"
+            )
         pairs = line.strike.size
         method = "regression" if pairs >= MIN_PAIRS else "interpolated discount"
         points.append(
@@ -209,17 +218,20 @@ def infer_forwards(quotes: Quotes) -> ForwardCurve:
 
 
 def rough_forwards(quotes: Quotes) -> dict[np.datetime64, float]:
-    """A forward for each expiry that has a pair: strike plus call less put, where these two are
-    closest. It neglects discounting, and serves to tell the sides of the money apart.
-    """
+    """A forward for each expiry that has a pair, good to tell the sides of the money apart."""
     forwards = {}
     for expiry in np.unique(quotes.expiry):
         strike, call, put = _pairs(quotes, expiry)
         if strike.size:
-            difference = quotes.mid[call] - quotes.mid[put]
-            nearest = int(np.argmin(np.abs(difference)))
-            forwards[expiry] = float(strike[nearest] + difference[nearest])
+            forwards[expiry] = _rough_forward(strike, quotes.mid[call] - quotes.mid[put])
     return forwards
+
+
+def _rough_forward(strike: FloatArray, difference: FloatArray) -> float:
+    # Strike plus call less put, at the few strikes where these two are closest: there discounting
+    # hardly matters, and the median ignores a bad pair.
+    nearest = np.argsort(np.abs(difference), kind="stable")[:5]
+    return float(np.median((strike + difference)[nearest]))
 
 
 def _pairs(
@@ -251,9 +263,10 @@ def _pair_up(quotes: Quotes, expiry: np.datetime64) -> _Line:
         floor = 0.1 * np.median(half_width)
         half_width = np.maximum(half_width, floor if floor > 0.0 else 1e-6 * strike)
         # A straddle at the forward costs 0.8 standard deviations of the price.
-        nearest = int(np.argmin(np.abs(difference)))
+        forward = _rough_forward(strike, difference)
+        nearest = int(np.argmin(np.abs(strike - forward)))
         straddle = quotes.mid[call[nearest]] + quotes.mid[put[nearest]]
-        deviations = (strike - strike[nearest] - difference[nearest]) / (straddle / 0.8)
+        deviations = (strike - forward) / max(straddle / 0.8, float(np.median(half_width)))
         emphasis = 1.0 / (1.0 + 0.25 * deviations**2)
     return _Line(expiry, maturity, strike, difference, half_width, emphasis)
 

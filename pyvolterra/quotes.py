@@ -264,7 +264,7 @@ def read_quotes(path: str | os.PathLike[str], *, strict: bool = False) -> Quotes
     if not used:
         first = rejections[0]
         raise QuoteError(
-            f"{file.name}: none of the {len(rejections)} rows is a usable quote; "
+            f"{file.name}: none of the {len(rejections)} rows is usable; "
             f"the first, row {first.row}: {first.detail}"
         )
     return _quotes(used, snapshot, file.name, tuple(rejections), parser.has_updates)
