@@ -1,31 +1,23 @@
 """Reading option quotes from CSV or Parquet; bad rows are set aside with row number and reason."""
 
-import csv
-import difflib
-import io
-import math
 import os
 from collections import Counter
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
-from datetime import UTC, date, datetime, time
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from .errors import MissingDependencyError, QuoteError
+from .errors import QuoteError
+from .quote_file import read_rows
+from .quote_row import BadRowError, Row, RowParser, iso
 
 __all__ = ["Quotes", "Rejection", "read_quotes"]
 
-COLUMNS = ("quote_time", "expiry", "strike", "option_type", "bid", "ask")
-OPTIONAL_COLUMNS = ("last_update",)
-SIDES = {"c": True, "call": True, "p": False, "put": False}
-# A date without a time of day means this time, in UTC.
-TIME_OF_PURE_DATE = time(16, 0, tzinfo=UTC)
 SECONDS_PER_YEAR = 365.0 * 86400.0  # ACT/365F
-PARQUET_MAGIC = b"PAR1"
 
 IntArray = NDArray[np.int64]
 FloatArray = NDArray[np.float64]
@@ -219,28 +211,15 @@ def read_quotes(path: str | os.PathLike[str], *, strict: bool = False) -> Quotes
     aside. Thread-safe.
     """
     file = Path(os.fspath(path))
-    if file.is_dir():
-        raise IsADirectoryError(f"{file} is a directory; a CSV or Parquet file of quotes is needed")
-    if not file.exists():
-        raise FileNotFoundError(f"{file} does not exist; a CSV or Parquet file of quotes is needed")
-    content = file.read_bytes()
-    if not content.strip():
-        raise QuoteError(f"{file.name}: the file is empty")
-    if content.startswith(PARQUET_MAGIC):
-        rows = _parquet_rows(content, file.name)
-    elif file.suffix.lower() in {".parquet", ".pq"}:
-        raise QuoteError(f"{file.name}: not a Parquet file, it does not begin with PAR1")
-    else:
-        rows = _csv_rows(content, file.name)
-
-    parser = _RowParser()
-    parsed: list[_Row] = []
+    parser = RowParser()
+    parsed: list[Row] = []
     rejections: list[Rejection] = []
-    for number, cells in rows:
+    for number, cells in read_rows(file):
         try:
             parsed.append(parser.parse(number, cells))
-        except _BadRowError as bad:
-            rejections.append(parser.rejection(number, cells, bad))
+        except BadRowError as bad:
+            known = parser.readable(cells)
+            rejections.append(Rejection(number, *known, "parse", bad.reason, bad.detail))
             if strict:
                 break
     if not (parsed or rejections):
@@ -248,13 +227,13 @@ def read_quotes(path: str | os.PathLike[str], *, strict: bool = False) -> Quotes
     snapshot, strangers = _one_snapshot(parsed, file.name)
     for row in strangers:
         detail = (
-            f"quote_time is {_iso(row.quote_time)}, and that of most rows {_iso(snapshot)}; a file "
+            f"quote_time is {iso(row.quote_time)}, and that of most rows {iso(snapshot)}; a file "
             "holds one snapshot (per-quote times belong in last_update)"
         )
         side = "call" if row.is_call else "put"
         rejections.append(
             Rejection(
-                row.number, _iso(row.expiry), row.strike, side, "parse", "other quote time", detail
+                row.number, iso(row.expiry), row.strike, side, "parse", "other quote time", detail
             )
         )
     rejections.sort(key=lambda rejection: rejection.row)
@@ -270,149 +249,7 @@ def read_quotes(path: str | os.PathLike[str], *, strict: bool = False) -> Quotes
     return _quotes(used, snapshot, file.name, tuple(rejections), parser.has_updates)
 
 
-# Cells by column name of one row, or what is wrong with the row as a whole.
-_Cells = dict[str, Any]
-
-
-@dataclass(frozen=True, slots=True)
-class _Row:
-    number: int
-    quote_time: datetime
-    expiry: datetime
-    strike: float
-    is_call: bool
-    bid: float
-    ask: float
-    last_update: datetime | None
-
-
-class _BadRowError(Exception):
-    def __init__(self, reason: str, detail: str) -> None:
-        super().__init__(detail)
-        self.reason, self.detail = reason, detail
-
-
-class _RowParser:
-    """Turns cells into values; every distinct time is parsed once."""
-
-    def __init__(self) -> None:
-        self.times: dict[Any, datetime] = {}
-        self.has_updates = False
-
-    def parse(self, number: int, cells: _Cells) -> _Row:
-        if "" in cells:
-            raise _BadRowError("wrong number of cells", cells[""])
-        quote_time = self._time("quote_time", cells["quote_time"])
-        expiry = self._time("expiry", cells["expiry"])
-        strike = _number("strike", cells["strike"])
-        if strike == 0.0:
-            raise _BadRowError("not positive", "strike is 0, must be positive")
-        is_call = _side(cells["option_type"])
-        bid = _number("bid", cells["bid"])
-        ask = _number("ask", cells["ask"])
-        if expiry <= quote_time:
-            raise _BadRowError(
-                "expired",
-                f"expiry is {_iso(expiry)}, must be after the quote time {_iso(quote_time)}",
-            )
-        last_update = None
-        if "last_update" in cells:
-            self.has_updates = True
-            if not _is_blank(cells["last_update"]):
-                last_update = self._time("last_update", cells["last_update"])
-        return _Row(number, quote_time, expiry, strike, is_call, bid, ask, last_update)
-
-    def rejection(self, number: int, cells: _Cells, bad: _BadRowError) -> Rejection:
-        """The record of a bad row, with as much of the quote as can be read."""
-        known: dict[str, Any] = {"expiry": "", "strike": math.nan, "side": ""}
-        readers: dict[str, Callable[[], Any]] = {
-            "expiry": lambda: _iso(self._time("expiry", cells["expiry"])),
-            "strike": lambda: _number("strike", cells["strike"]),
-            "side": lambda: "call" if _side(cells["option_type"]) else "put",
-        }
-        for name, read in readers.items():
-            try:
-                known[name] = read()
-            except (_BadRowError, KeyError):
-                continue
-        return Rejection(number, **known, stage="parse", reason=bad.reason, detail=bad.detail)
-
-    def _time(self, column: str, value: Any) -> datetime:
-        try:
-            return self.times[value]
-        except (KeyError, TypeError):
-            pass
-        if _is_blank(value):
-            raise _BadRowError("empty cell", f"{column} is empty, must be an ISO 8601 time")
-        moment = _moment(value)
-        if moment is None:
-            raise _BadRowError(
-                "not a time",
-                f"{column} is {value!r}, must be an ISO 8601 date or time such as "
-                "2031-05-13T15:30:00Z",
-            )
-        self.times[value] = moment
-        return moment
-
-
-def _is_blank(value: Any) -> bool:
-    return value is None or (isinstance(value, str) and not value.strip())
-
-
-def _moment(value: Any) -> datetime | None:
-    # A UTC time of whole seconds, or None.
-    if isinstance(value, str):
-        text = value.strip()
-        try:
-            value = date.fromisoformat(text)
-        except ValueError:
-            try:
-                value = datetime.fromisoformat(text)
-            except ValueError:
-                return None
-    if isinstance(value, datetime):
-        moment = value if value.tzinfo else value.replace(tzinfo=UTC)
-    elif isinstance(value, date):
-        moment = datetime.combine(value, TIME_OF_PURE_DATE)
-    else:
-        return None
-    try:
-        return moment.astimezone(UTC).replace(microsecond=0)
-    except OverflowError:
-        return None
-
-
-def _number(column: str, value: Any) -> float:
-    try:
-        number = float(value)
-    except (TypeError, ValueError):
-        if _is_blank(value):
-            raise _BadRowError("empty cell", f"{column} is empty, must be a number") from None
-        raise _BadRowError("not a number", f"{column} is {value!r}, must be a number") from None
-    # Python reads 1_000 as 1000 and True as 1; no file means that.
-    if isinstance(value, bool) or (isinstance(value, str) and "_" in value):
-        raise _BadRowError("not a number", f"{column} is {value!r}, must be a number")
-    if not math.isfinite(number):
-        raise _BadRowError("not finite", f"{column} is {value!r}, must be a finite number")
-    if number < 0.0:
-        raise _BadRowError("negative", f"{column} is {value}, must not be negative")
-    return number
-
-
-def _side(value: Any) -> bool:
-    is_call = SIDES.get(str(value).strip().lower())
-    if is_call is None:
-        raise _BadRowError(
-            "unknown option type", f"option_type is {value!r}, must be one of C, P, call, put"
-        )
-    return is_call
-
-
-def _iso(moment: datetime) -> str:
-    return moment.strftime("%Y-%m-%dT%H:%M:%SZ")
-
-
-def _one_snapshot(rows: Sequence[_Row], source: str) -> tuple[datetime, list[_Row]]:
+def _one_snapshot(rows: Sequence[Row], source: str) -> tuple[datetime, list[Row]]:
     # The quote time of the majority, and the rows that have another.
     if not rows:
         return datetime.min.replace(tzinfo=UTC), []
@@ -421,7 +258,7 @@ def _one_snapshot(rows: Sequence[_Row], source: str) -> tuple[datetime, list[_Ro
     if 2 * count <= len(rows):
         first = {moment: row.number for row in reversed(rows) for moment in [row.quote_time]}
         shown = sorted(first.items(), key=lambda item: item[1])[:3]
-        examples = ", ".join(f"row {number} has {_iso(moment)}" for moment, number in shown)
+        examples = ", ".join(f"row {number} has {iso(moment)}" for moment, number in shown)
         raise QuoteError(
             f"{source}: {len(counts)} different quote times and none shared by more than half of "
             f"the rows ({examples}); a file holds one snapshot (per-quote times belong in "
@@ -431,7 +268,7 @@ def _one_snapshot(rows: Sequence[_Row], source: str) -> tuple[datetime, list[_Ro
 
 
 def _quotes(
-    rows: Sequence[_Row],
+    rows: Sequence[Row],
     snapshot: datetime,
     source: str,
     rejections: tuple[Rejection, ...],
@@ -456,92 +293,4 @@ def _quotes(
         source=source,
         rejections=rejections,
         last_update=instants(row.last_update for row in rows) if has_updates else None,
-    )
-
-
-def _columns(found: Sequence[str], source: str, hint: str = "") -> dict[str, int]:
-    # Place of each column in the file; a missing or doubled one is fatal.
-    for name in (*COLUMNS, *OPTIONAL_COLUMNS):
-        if found.count(name) > 1:
-            raise QuoteError(f"{source}: column {name} appears {found.count(name)} times")
-    missing = [name for name in COLUMNS if name not in found]
-    if missing:
-        others = {name.lower(): name for name in found if name not in COLUMNS}
-        words = []
-        for name in missing:
-            close = difflib.get_close_matches(name, others, n=1, cutoff=0.6)
-            words.append(f"{name} (is it {others[close[0]]!r}?)" if close else name)
-        raise QuoteError(
-            f"{source}: missing column{'s' if len(missing) > 1 else ''} {', '.join(words)}; "
-            f"found: {', '.join(found)}{hint}"
-        )
-    return {n: found.index(n) for n in (*COLUMNS, *OPTIONAL_COLUMNS) if n in found}
-
-
-def _csv_rows(content: bytes, source: str) -> Iterator[tuple[int, _Cells]]:
-    # One line is one row, so that a stray quotation mark spoils its own row only.
-    try:
-        text = content.decode("utf-8-sig")
-    except UnicodeDecodeError as error:
-        row = content.count(b"\n", 0, error.start) + 1
-        raise QuoteError(
-            f"{source}, row {row}: not UTF-8 text; a CSV or Parquet file of quotes is needed"
-        ) from None
-    if not text.strip():
-        raise QuoteError(f"{source}: the file is empty")
-    lines = io.StringIO(text, newline=None)
-    try:
-        header = [name.strip() for name in _cells_of(next(lines))]
-    except csv.Error as error:
-        raise QuoteError(f"{source}, row 1: the header is not CSV ({error})") from None
-    separators = [mark for mark in ";\t|" if len(header) == 1 and mark in header[0]]
-    hint = f" (cells must be separated by commas, not by {separators[0]!r})" if separators else ""
-    columns = _columns(header, source, hint)
-
-    def rows() -> Iterator[tuple[int, _Cells]]:
-        for number, line in enumerate(lines, start=2):
-            try:
-                cells = _cells_of(line)
-            except csv.Error as error:
-                yield number, {"": f"the line is not CSV ({error})"}
-                continue
-            if not any(cells):
-                continue
-            if len(cells) < len(header) or any(cells[len(header) :]):
-                yield number, {"": f"{len(cells)} cells, must be {len(header)} as in the header"}
-            else:
-                yield number, {name: cells[place] for name, place in columns.items()}
-
-    return rows()
-
-
-def _cells_of(line: str) -> list[str]:
-    line = line.rstrip("\n")
-    return next(csv.reader((line,), strict=True)) if '"' in line else line.split(",")
-
-
-def _parquet_rows(content: bytes, source: str) -> Iterator[tuple[int, _Cells]]:
-    try:
-        import pyarrow as arrow
-        import pyarrow.parquet as parquet
-    except ImportError:
-        raise MissingDependencyError(
-            f"reading the Parquet file {source} needs pyarrow, which is not installed: "
-            'pip install "pyvolterra[desk]"'
-        ) from None
-    try:
-        file = parquet.ParquetFile(io.BytesIO(content))
-        names = _columns([str(name) for name in file.schema_arrow.names], source)
-        table = file.read(columns=list(names))
-    except (arrow.ArrowException, OSError) as error:
-        raise QuoteError(f"{source}: not a readable Parquet file ({error})") from None
-    lists = {}
-    for name in names:
-        column = table.column(name)
-        if arrow.types.is_timestamp(column.type):  # to UTC; Python times end at microseconds
-            column = column.cast(arrow.timestamp("us"), safe=False)
-        lists[name] = column.to_pylist()
-    return (
-        (number, dict(zip(lists, values, strict=True)))
-        for number, values in enumerate(zip(*lists.values(), strict=True), start=2)
     )

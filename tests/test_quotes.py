@@ -106,11 +106,12 @@ def test_a_bad_cell_is_set_aside_with_its_row(tmp_path, column, value, reason, w
     cells = dict(zip(names, [*GOOD.split(","), ""], strict=True))
     cells[column] = value
     good = GOOD + ","
-    path = write(tmp_path, HEADER + ",last_update", good, "", good, ",".join(cells.values()), good)
+    bad = ",".join(cells.values())
+    path = write(tmp_path, HEADER + ",last_update", good, " ", ",,,,,,", good, bad, good)
     quotes = read_quotes(path)
-    np.testing.assert_array_equal(quotes.row, [2, 4, 6])  # row 3 is blank
+    np.testing.assert_array_equal(quotes.row, [2, 5, 7])  # rows 3 and 4 are blank
     (rejection,) = quotes.rejections
-    assert (rejection.row, rejection.stage, rejection.reason) == (5, "parse", reason)
+    assert (rejection.row, rejection.stage, rejection.reason) == (6, "parse", reason)
     assert words in rejection.detail
     if column != "strike":
         assert rejection.strike == 100.0
@@ -118,7 +119,7 @@ def test_a_bad_cell_is_set_aside_with_its_row(tmp_path, column, value, reason, w
         assert rejection.side == "call"
     if column not in ("expiry", "quote_time"):
         assert rejection.expiry == "2031-06-20T16:00:00Z"
-    with pytest.raises(pv.QuoteError, match=r"quotes\.csv, row 5: ") as refused:
+    with pytest.raises(pv.QuoteError, match=r"quotes\.csv, row 6: ") as refused:
         read_quotes(path, strict=True)
     assert words in str(refused.value)
 
