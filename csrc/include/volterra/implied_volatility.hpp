@@ -33,7 +33,7 @@ struct implied_volatility_result {
 namespace detail {
 
 // z with Phi(-z) = p <= 1/2, to 8e-5. Rational least-maximum fit of w - z in w = sqrt(-2 log p),
-// weights by iterated reweighting over p from 1/2 to 1e-330.
+// weights by iterated reweighting over p from 1/2 to 1e-332.
 inline double normal_quantile_guess(double log_p) {
     const double w = std::sqrt(-2.0 * log_p);
     return w - (2.6546018 + w * (1.55704962 + w * 0.06017387)) /
@@ -48,12 +48,15 @@ inline double mills_denominator(double z) { return z + std::sqrt(z * z + 2.54647
 // a / w^2, w^2 = 2 log(1 + 1/eta), is fitted by a rational function of w to 3e-4, and the ratio of
 // the two volatilities by 1 + s^2 (...), least squares over k <= 3, q <= 1/2, to 5e-3.
 inline double guess_small_k(double k, double q) {
-    const double ratio = std::expm1(k) / q;
+    const double spread = std::expm1(k);
+    const double ratio = spread / q;
     double s = 0.0;
     if (ratio < 1e-6) {
         s = sqrt_two_pi * (q + 0.5 * k);
     } else {
-        const double w2 = 2.0 * std::log1p(ratio);
+        // The quotient overflows for prices below 1e-308.
+        const double w2 =
+            2.0 * (ratio < 1e300 ? std::log1p(ratio) : std::log(spread) - std::log(q));
         const double w = std::sqrt(w2);
         s = k *
             (1.0 + w * (0.00931027 + w * (0.05494495 + w * (0.00819867 + w * 0.00341292)))) /
@@ -128,6 +131,7 @@ inline double householder_step(double n, double second, double third) {
 // cancellation. NaN if the iteration does not settle.
 inline double total_volatility(double k, double q, double gap) {
     using namespace detail;
+    if (k == 0.0 && q < 1e-9) return sqrt_two_pi * q;  // exact to s^2/24; slopes overflow here
     const bool small_k = k <= 3.0;
     bool upper = q > 0.5;
     if (!small_k && !upper)  // above the price at z1 = 0
@@ -165,6 +169,7 @@ inline implied_volatility_result black_implied_volatility(double price, double f
     // Undiscounted price value + rest, free of rounding error to first order.
     double value = price / discount;
     double rest = std::fma(-value, discount, price) / discount;
+    if (!(std::abs(rest) < value)) rest = 0.0;  // negative, or infinite: out of bounds anyway
     const bool in_the_money = is_call ? forward > strike : strike > forward;
     if (in_the_money) {
         // Parity: subtract |F - K| = large - small, whose own rounding error is kept.
