@@ -48,16 +48,17 @@ def test_in_the_money_against_mpmath():
     terms, _ = exact_prices(points)
     forward, strike = points[:2]
     call = forward > strike
+    discount = 0.9371
     checked = 0
     for i, (otm, _, slope) in enumerate(terms):
         f, k, t, v = (float(a[i]) for a in points)
         whole = otm + abs(mp.mpf(f) - mp.mpf(k))
-        price = float(whole)
-        if not price < max(f, k) or whole * EPS > 1e-3 * slope:
+        price = float(discount * whole)
+        if not price < discount * max(f, k) or whole * EPS > 1e-3 * slope:
             continue
         checked += 1
-        exact = v * (1 + (mp.mpf(price) - whole) / slope)
-        value = black.implied_volatility(price, f, k, t, call=bool(call[i]))
+        exact = v * (1 + (mp.mpf(price) / discount - whole) / slope)
+        value = black.implied_volatility(price, f, k, t, discount=discount, call=bool(call[i]))
         assert abs(value - exact) <= 4.0 * EPS * (1.0 + float(whole / slope)) * v, (f, k, t, v)
     assert checked >= 1_000
 
@@ -166,6 +167,17 @@ def test_prices_outside_the_bounds(price, strike, call, message):
     assert math.isnan(
         black.implied_volatility(price, 100.0, strike, 1.0, discount=0.5, call=call, errors="nan")
     )
+
+
+@given(st.floats(1.0, 100.0), st.floats(1.0, 100.0), st.floats(0.1, 1.1), st.booleans())
+def test_exactly_at_the_bounds(f, k, d, call):
+    upper, payoff = (f, f - k) if call else (k, k - f)
+    with pytest.raises(ValueError, match="upper bound"):
+        black.implied_volatility(d * upper, f, k, 1.0, discount=d, call=call)
+    # Rounding may leave the intrinsic value a digit above, never below.
+    value = black.implied_volatility(d * max(payoff, 0.0), f, k, 1.0, discount=d, call=call)
+    assert value >= 0.0
+    assert black.price(f, k, 1.0, value, call=call) <= max(payoff, 0.0) + 4.0 * EPS * upper
 
 
 def test_the_message_names_the_element():
