@@ -92,10 +92,10 @@ def price(
     Notes
     -----
     The out-of-the-money part is computed first and never as a difference of large terms; in the
-    money the intrinsic value is added. Largest error seen against 30-digit values at 2e4 random
-    points down to prices of 1e-300 of the forward: 1.5 eps (1 + s |dq/ds| / q), eps = 2.2e-16, with
+    money the intrinsic value is added. Largest error seen against 30-digit values at 3.6e5 random
+    points down to prices of 1e-300 of the forward: 2.2 eps (1 + s |dq/ds| / q), eps = 2.2e-16, with
     s the total volatility and q the out-of-the-money price; the second term is what rounding the
-    inputs does. About 30 million prices a second on one thread. Safe to call from several threads
+    inputs does. About 20 million prices a second on one thread. Safe to call from several threads
     at once; the interpreter lock is released. Source: see the module.
 
     Examples
@@ -215,9 +215,9 @@ def implied_volatility(
     -----
     A rational guess in one of three regions, then fourth-order Householder steps on the logarithm
     of the out-of-the-money price or of its distance to the upper bound; in-the-money prices are
-    reduced by put-call parity without losing digits. Largest relative error seen against 30-digit
-    values at 2e4 random points, prices from 1e-300 of the forward to the last digit before the
-    bound: 1.7 eps (1 + q / (s dq/ds)), eps = 2.2e-16, with s the total volatility and q the price;
+    reduced by put-call parity. Largest relative error seen against 30-digit
+    values at 3.6e5 random points, prices from 1e-300 of the forward to the last digit before the
+    bound: 2.4 eps (1 + q / (s dq/ds)), eps = 2.2e-16, with s the total volatility and q the price;
     the second term is what one rounding of the price does. An in-the-money price knows its time
     value only to its own last digit, and the volatility no better. About 5 to 6 million inversions
     a second on one thread. Safe to call from several threads at once; the interpreter lock is

