@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ..fit import Fit
-from .slices import ExpirySlice, curve_errors, market_skew, model_skew
+from .slices import ExpirySlice, curve_errors, market_skew, model_skew, price_decimals
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -46,10 +46,12 @@ _TIME_TICKS = (
 
 def smile_picture(fit_slice: ExpirySlice) -> bytes:
     """Smile of one expiry: quotes as bid-ask bars, the model as a line, residuals below."""
+    from matplotlib.ticker import MaxNLocator
+
     s = fit_slice
-    figure = _figure(5.8, 4.5)
+    figure = _figure(5.8, 4.7)
     grid = figure.add_gridspec(
-        2, 1, height_ratios=(3.4, 1.0), hspace=0.08, left=0.115, right=0.975, top=0.84, bottom=0.115
+        2, 1, height_ratios=(3.4, 1.0), hspace=0.08, left=0.122, right=0.975, top=0.815, bottom=0.11
     )
     top, below = figure.add_subplot(grid[0]), figure.add_subplot(grid[1])
     x = 100.0 * s.log_moneyness
@@ -58,30 +60,36 @@ def smile_picture(fit_slice: ExpirySlice) -> bytes:
     top.set_ylim(*_volatility_range([s]))
     top.axvline(0.0, color=MUTED, lw=0.8, ls=(0, (2, 3)), zorder=1)
     top.set_ylabel("implied volatility (%)")
+    top.yaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5, 10]))
     top.tick_params(labelbottom=False)
-    _legend(top, s)
+    _key(figure, _smile_key(not s.inside.all()), 0.67, 4.7 - 0.73)
 
     _residual_axes(below)
-    shown = np.clip(s.half_widths, -2.9, 2.9)
+    shown = np.clip(s.half_widths, -2.7, 2.7)
     colour = np.where(s.inside, MODEL, ALERT)
     below.vlines(x, 0.0, shown, color=colour, lw=1.3, zorder=2)
-    _dots(below, x, shown, s.inside, size=11.0)
+    # Arrowheads where the residual runs off the strip.
+    for marker, at in (
+        ("o", np.abs(s.half_widths) <= 2.7),
+        ("^", s.half_widths > 2.7),
+        ("v", s.half_widths < -2.7),
+    ):
+        below.scatter(x[at], shown[at], s=11.0, marker=marker, c=colour[at], lw=0, zorder=3)
     below.set_xlabel("log-moneyness ln(K/F) (%)")
     below.set_ylabel("model − mid\n(half-widths)", fontsize=8.5)
-    reach = float(x.max() - x.min()) or 1.0
     for axes in (top, below):
-        axes.set_xlim(min(x.min(), 0.0) - 0.03 * reach, max(x.max(), 0.0) + 0.03 * reach)
+        axes.set_xlim(_padded(np.append(x, 0.0), 0.03))
     figure.align_ylabels([top, below])
-    figure.text(0.02, 0.945, s.label, fontsize=13, fontweight="bold", color=INK)
+    figure.text(0.02, 0.944, s.label, fontsize=13, fontweight="bold", color=INK)
     _right_text(
         figure,
-        0.945,
+        0.944,
         f"{s.days:.1f} days" if s.days < 2.0 else f"{s.days:,.0f} days",
-        f"forward {s.forward:,.{_decimals(s.forward)}f}",
+        f"forward {s.forward:,.{price_decimals(s.forward)}f}",
     )
     figure.text(
         0.02,
-        0.885,
+        0.892,
         f"{len(s)} quotes · rms {1e4 * s.rms:.0f} bp of volatility · "
         f"{100.0 * s.share_inside:.0f} % inside bid–ask",
         fontsize=9.5,
@@ -111,10 +119,10 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
     x_limits = _padded(np.concatenate(z), 0.04)
     low, high = _volatility_range(slices)
     # The labels stand in the upper right quarter: room for them above the right wings.
-    right = [
-        low,
-        *(100.0 * s.ask[zs > 0.0].max(initial=0.0) for s, zs in zip(slices, z, strict=True)),
-    ]
+    right = [low]
+    for s, zs in zip(slices, z, strict=True):
+        right.append(100.0 * s.ask[zs > 0.0].max(initial=0.0))
+        right.append(100.0 * s.curve[s.curve_log_moneyness > 0.0].max(initial=0.0))
     y_limits = (low, max(high, low + (max(right) - low) / 0.70))
     for i, s in enumerate(slices):
         axes = figure.add_subplot(grid[i // columns, i % columns])
@@ -137,7 +145,7 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
     text: dict[str, Any] = {"fontsize": 10, "color": INK}
     figure.text(0.5, 0.08 / height, x_label, ha="center", **text)
     figure.text(0.06 / width, 0.5, "implied volatility (%)", va="center", rotation=90, **text)
-    _strip_legend(figure, 0.62 / width, 1.0 - 0.17 / height, narrow=columns <= 2)
+    _key(figure, _smile_key(True), 0.62, height - 0.17)
     return _png(figure)
 
 
@@ -147,7 +155,7 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     from matplotlib.lines import Line2D
 
     count = len(slices)
-    height = 1.75 + 0.26 * max(count, 5)
+    height = 1.75 + 0.26 * max(count, 3)
     figure = _figure(6.2, height)
     grid = figure.add_gridspec(
         1,
@@ -194,7 +202,7 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     bars.spines[:].set_visible(False)
     bars.set_title("inside bid–ask", fontsize=9, color=MUTED, pad=4)
     for panel in (axes, bars):
-        panel.set_ylim(count - 0.5, -0.5)
+        panel.set_ylim(max(count, 3) - 0.5, -0.5)
     _title(figure, height, "Model against bid and ask")
     figure.text(0.02, 1.0 - 0.665 / height, "model at", va="center", fontsize=9, color=INK)
     strip = figure.add_axes((0.165, 1.0 - 0.72 / height, 0.26, 0.11 / height))
@@ -204,67 +212,56 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     strip.tick_params(length=0, pad=1.5, labelsize=8.5)
     strip.spines[:].set_visible(False)
     ring = Line2D([], [], marker="o", ls="", mfc="white", mec=INK, mew=1.1, ms=5.8)
-    figure.legend(
-        [ring],
-        ["model outside bid–ask"],
-        loc="center left",
-        bbox_to_anchor=(0.45, 1.0 - 0.665 / height),
-        handletextpad=0.2,
-        **(_LEGEND | {"handlelength": 1.0}),
-    )
+    _key(figure, [(ring, "model outside bid–ask")], 2.85, height - 0.665)
     return _png(figure)
 
 
 def skew_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> bytes:
     """At-the-money skew against maturity on logarithmic axes."""
     market = market_skew(slices)
-    maturities = np.array([s.maturity for s in slices])
-    times = _log_grid(maturities, 40)
-    model = model_skew(fit.model, times)
+    times = _log_grid(np.array([s.maturity for s in slices]), 40)
+    skew = model_skew(fit.model, times)
+    signs = np.sign(np.concatenate([market.market, skew[np.isfinite(skew)]]))
+    falling = bool(np.all(signs <= 0.0))
+    # Without correlation the model has no skew: nothing to draw on a log axis but rounding.
+    model = np.where(np.abs(skew) > 1e-5, np.abs(skew), np.nan)
+    size = np.abs(market.market)
     figure, axes = _single()
     axes.set_xscale("log")
     axes.set_yscale("log")
-    hurst = fit.model.kernel.hurst
-    start = np.flatnonzero(np.isfinite(model) & (model != 0.0))[:1]
-    if hurst < 0.5 and start.size:
-        guide = np.abs(model[start[0]]) * (times / times[start[0]]) ** (hurst - 0.5)
-        axes.plot(
-            times,
-            guide,
-            color=GUIDE,
-            lw=1.4,
-            ls=(0, (5, 3)),
-            label=f"slope H − 1/2 = −{0.5 - hurst:.2f}",
-            zorder=2,
+    key: list[tuple[Any, str]] = []
+    if size.size:
+        # Two standard errors, cut where the log axis ends for them.
+        error = np.array([np.minimum(2.0 * market.error, 0.9 * size), 2.0 * market.error])
+        dots = axes.errorbar(
+            market.maturity,
+            size,
+            yerr=error,
+            fmt="o",
+            ms=4.5,
+            color=INK,
+            mfc="white",
+            mew=1.3,
+            elinewidth=1.2,
+            ecolor=QUOTE,
+            zorder=4,
         )
-    axes.plot(times, np.abs(model), color=MODEL, lw=1.9, label="model", zorder=3)
-    size = np.abs(market.market)
-    # Two standard errors, kept above a tenth of the estimate so that the log axis can show them.
-    error = np.array([np.minimum(2.0 * market.error, 0.9 * size), 2.0 * market.error])
-    axes.errorbar(
-        market.maturity,
-        size,
-        yerr=error,
-        fmt="o",
-        ms=4.5,
-        color=INK,
-        mfc="white",
-        mew=1.3,
-        elinewidth=1.2,
-        ecolor=QUOTE,
-        label="market ± 2 s.e.",
-        zorder=4,
-    )
+        key.append((dots, "market ± 2 s.e."))
+    drawn = np.flatnonzero(np.isfinite(model))
+    if drawn.size:
+        key.append((axes.plot(times, model, color=MODEL, lw=1.9, zorder=3)[0], "model"))
+    hurst = fit.model.kernel.hurst
+    if drawn.size and hurst < 0.5:
+        first = drawn[0]
+        guide = model[first] * (times / times[first]) ** (hurst - 0.5)
+        line = axes.plot(times, guide, color=GUIDE, lw=1.4, ls=(0, (5, 3)), zorder=2)[0]
+        key.append((line, f"slope H − 1/2 = −{0.5 - hurst:.2f}"))
     _time_axis(axes, times, "time to expiry")
-    shown = np.concatenate([np.abs(model[np.isfinite(model)]), size])
-    if shown.size and shown.max() > 0.0:
-        _plain_log_ticks(axes, shown[shown > 0.0])
-    signs = np.sign(market.market[market.market != 0.0])
-    sign = "−" if signs.size and np.all(signs < 0.0) else "|" if signs.size else ""
-    name = {"−": "−∂σ/∂ ln K", "|": "|∂σ/∂ ln K|", "": "∂σ/∂ ln K"}[sign]
+    _plain_log_ticks(axes, np.concatenate([model[drawn], size[size > 0.0]]))
+    name = "−∂σ/∂ ln K" if falling else "|∂σ/∂ ln K|"
     axes.set_ylabel(f"{name} at the forward\n(volatility points per 1 % of ln K)", fontsize=9)
-    axes.legend(loc="best", **_LEGEND)
     _title(figure, figure.get_figheight(), "At-the-money skew")
+    _key(figure, key, 0.78, figure.get_figheight() - 0.53)
     return _png(figure)
 
 
@@ -278,45 +275,27 @@ def forward_volatility_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> byt
     error = curve_errors(fit, times)
     figure, axes = _single()
     axes.set_xscale("log")
-    axes.fill_between(
-        times,
-        100.0 * np.sqrt(np.maximum(xi - 2.0 * error, 0.0)),
-        100.0 * np.sqrt(np.maximum(xi + 2.0 * error, 0.0)),
-        color=BAND,
-        lw=0,
-        label="± 2 s.e.",
-        zorder=1,
-    )
-    axes.plot(times, 100.0 * volatility, color=MODEL, lw=1.9, label="forward √ξ(t)", zorder=3)
-    axes.plot(
-        times,
-        100.0 * average,
-        color=GUIDE,
-        lw=1.6,
-        ls=(0, (5, 3)),
-        label="average from now to t",
-        zorder=3,
-    )
-    low, high = _padded(100.0 * np.concatenate([volatility, average]), 0.25)
-    axes.set_ylim(max(low, 0.0), high)
-    ticks = axes.get_xaxis_transform()
-    axes.plot(
-        maturities, np.zeros(maturities.size), "|", color=INK, ms=7, transform=ticks, clip_on=False
-    )
+    low, high = (100.0 * np.sqrt(np.maximum(xi + k * error, 0.0)) for k in (-2.0, 2.0))
+    band = axes.fill_between(times, low, high, color=BAND, lw=0, zorder=1)
+    forward = axes.plot(times, 100.0 * volatility, color=MODEL, lw=1.9, zorder=3)[0]
+    dashes: dict[str, Any] = {"color": GUIDE, "lw": 1.6, "ls": (0, (5, 3)), "zorder": 3}
+    mean = axes.plot(times, 100.0 * average, **dashes)[0]
+    foot: dict[str, Any] = {"transform": axes.get_xaxis_transform(), "clip_on": False}
+    expiries = axes.plot(maturities, 0.0 * maturities, "|", color=INK, ms=7, **foot)[0]
+    # The band may be wide where the curve is free: it does not set the scale.
+    bottom, top = _padded(100.0 * np.concatenate([volatility, average]), 0.25)
+    axes.set_ylim(max(bottom, 0.0), top)
     _time_axis(axes, times, "time t from now")
     axes.set_ylabel("annualised volatility (%)")
-    axes.legend(loc="best", **_LEGEND)
     _title(figure, figure.get_figheight(), "Forward variance ξ(t), as volatility")
-    figure.text(0.975, 0.9, "ticks at the foot: expiries", ha="right", fontsize=8.5, color=MUTED)
+    key: list[tuple[Any, str]] = [
+        (forward, "forward √ξ(t)"),
+        (band, "± 2 s.e."),
+        (mean, "average to t"),
+        (expiries, "expiries"),
+    ]
+    _key(figure, key, 0.78, figure.get_figheight() - 0.53)
     return _png(figure)
-
-
-_LEGEND: dict[str, Any] = {
-    "frameon": False,
-    "fontsize": 9,
-    "handlelength": 2.2,
-    "labelcolor": INK,
-}
 
 
 def _figure(width: float, height: float) -> "Figure":
@@ -329,8 +308,8 @@ def _figure(width: float, height: float) -> "Figure":
 
 
 def _single() -> tuple["Figure", "Axes"]:
-    figure = _figure(5.8, 4.0)
-    axes = figure.add_axes((0.135, 0.125, 0.84, 0.745))
+    figure = _figure(5.8, 4.1)
+    axes = figure.add_axes((0.135, 0.125, 0.84, 0.70))
     return figure, axes
 
 
@@ -381,17 +360,6 @@ def _cap_width(x: NDArray[np.float64]) -> float:
     return min(0.006 * span, 0.3 * span / max(x.size, 1))
 
 
-def _dots(
-    axes: "Axes",
-    x: NDArray[np.float64],
-    y: NDArray[np.float64],
-    inside: NDArray[np.bool_],
-    size: float,
-) -> None:
-    for mask, colour in ((inside, MODEL), (~inside, ALERT)):
-        axes.scatter(x[mask], y[mask], s=size, color=colour, linewidths=0, zorder=3)
-
-
 def _residual_axes(axes: "Axes") -> None:
     axes.axhspan(-1.0, 1.0, color="#eef1f3", lw=0, zorder=0)
     axes.axhline(0.0, color=MUTED, lw=0.8, zorder=1)
@@ -399,37 +367,35 @@ def _residual_axes(axes: "Axes") -> None:
     axes.set_yticks([-2, 0, 2], ["−2", "0", "+2"])
 
 
-def _handles() -> list[Any]:
+def _smile_key(alert: bool) -> list[tuple[Any, str]]:
     from matplotlib.lines import Line2D
 
     def bar(colour: str) -> Line2D:
         return Line2D([], [], marker="|", ls="", color=colour, ms=10, mew=2.0)
 
-    return [bar(QUOTE), bar(ALERT), Line2D([], [], color=MODEL, lw=1.9)]
+    key: list[tuple[Any, str]] = [(bar(QUOTE), "bid–ask")]
+    if alert:
+        key.append((bar(ALERT), "bid–ask, model outside"))
+    return [*key, (Line2D([], [], color=MODEL, lw=1.9), "model")]
 
 
-_LABELS = ["bid–ask", "bid–ask, model outside", "model"]
-
-
-def _legend(axes: "Axes", s: ExpirySlice) -> None:
-    handles, labels = _handles(), list(_LABELS)
-    if bool(s.inside.all()):
-        del handles[1], labels[1]
-    axes.legend(handles, labels, loc="best", **(_LEGEND | {"handlelength": 1.6}))
-
-
-def _strip_legend(figure: "Figure", x: float, y: float, *, narrow: bool) -> None:
+def _key(figure: "Figure", key: list[tuple[Any, str]], x: float, y: float) -> None:
+    """Legend in one line outside the axes, where it covers no data; x and y in inches."""
+    width, height = figure.get_size_inches()
     figure.legend(
-        _handles(),
-        _LABELS,
+        [handle for handle, _ in key],
+        [text for _, text in key],
         loc="center left",
-        bbox_to_anchor=(x, y),
-        ncols=3,
+        bbox_to_anchor=(x / width, y / height),
+        ncols=len(key),
         borderaxespad=0.0,
         borderpad=0.0,
-        columnspacing=1.0 if narrow else 2.0,
-        handletextpad=0.4,
-        **(_LEGEND | {"handlelength": 1.4, "fontsize": 8.5 if narrow else 10}),
+        columnspacing=1.5,
+        handletextpad=0.45,
+        handlelength=1.7,
+        frameon=False,
+        fontsize=9,
+        labelcolor=INK,
     )
 
 
@@ -439,10 +405,6 @@ def _title(figure: "Figure", height: float, text: str) -> None:
 
 def _right_text(figure: "Figure", y: float, *parts: str) -> None:
     figure.text(0.975, y, " · ".join(parts), ha="right", fontsize=10, color=INK)
-
-
-def _decimals(forward: float) -> int:
-    return 2 if forward < 10_000.0 else 0
 
 
 def _padded(values: NDArray[np.float64], share: float) -> tuple[float, float]:
@@ -465,8 +427,33 @@ def _log_grid(
 def _time_axis(axes: "Axes", times: NDArray[np.float64], label: str) -> None:
     low, high = times[0] / 1.12, times[-1] * 1.12
     ticks = [(t, text) for t, text in _TIME_TICKS if low <= t <= high]
-    if len(ticks) < 2:
-        ticks = [(t, f"{365.0 * t:.3g}d") for t in np.geomspace(times[0], times[-1], 4)]
+    if len(ticks) < 3:
+        days = (
+            1,
+            2,
+            3,
+            4,
+            5,
+            7,
+            10,
+            14,
+            20,
+            25,
+            30,
+            35,
+            40,
+            45,
+            60,
+            75,
+            90,
+            120,
+            150,
+            180,
+            240,
+            300,
+            365,
+        )
+        ticks = [(d / 365.0, f"{d}d") for d in days if low <= d / 365.0 <= high]
     axes.set_xticks([t for t, _ in ticks], [text for _, text in ticks])
     axes.set_xticks([], minor=True)
     axes.set_xlim(low, high)
@@ -474,9 +461,17 @@ def _time_axis(axes: "Axes", times: NDArray[np.float64], label: str) -> None:
 
 
 def _plain_log_ticks(axes: "Axes", values: NDArray[np.float64]) -> None:
-    low, high = float(values.min()) / 1.25, float(values.max()) * 1.25
+    if not values.size:
+        axes.set_yticks([], minor=True)
+        return
+    high = float(values.max()) * 1.25
+    low = max(float(values.min()) / 1.25, 1e-3 * high)
     decades = range(math.floor(math.log10(low)), math.ceil(math.log10(high)) + 1)
-    ticks = [m * 10.0**d for d in decades for m in (1, 2, 5) if low <= m * 10.0**d <= high]
+    ticks: list[float] = []
+    for steps in ((1, 2, 5), (1, 1.5, 2, 3, 4, 5, 6, 7, 8, 9)):
+        ticks = [m * 10.0**d for d in decades for m in steps if low <= m * 10.0**d <= high]
+        if len(ticks) >= 3:
+            break
     axes.set_yticks(ticks, [f"{t:g}" for t in ticks])
     axes.set_yticks([], minor=True)
     axes.set_ylim(low, high)

@@ -11,7 +11,7 @@ import numpy as np
 from ..cleaning import cleaning_table
 from ..fit import Fit
 from .files import versions
-from .slices import ExpirySlice, expiry_labels
+from .slices import ExpirySlice, expiry_labels, price_decimals
 
 # Quotes set aside that are listed one by one; the table of reasons counts all of them.
 MOST_LISTED = 200
@@ -97,10 +97,15 @@ def _fitted(fit: Fit, slices: Sequence[ExpirySlice]) -> str:
     other = (
         f"; {rest} more, mostly in the money, served only to infer the forwards" if rest > 0 else ""
     )
+    first, last = _text(slices[0].label), _text(slices[-1].label)
+    expiries = (
+        f"<b>{len(slices)}</b> expiries from {first} to {last}"
+        if len(slices) > 1
+        else f"one expiry, {first}"
+    )
     return (
         f"Quotes of <b>{_moment(fit.quote_time)}</b>. <b>{fit.quotes_read:,}</b> quotes read, "
-        f"<b>{fit.residuals.size:,}</b> fitted on <b>{len(slices)}</b> expiries from "
-        f"{_text(slices[0].label)} to {_text(slices[-1].label)}, "
+        f"<b>{fit.residuals.size:,}</b> fitted on {expiries}, "
         f"<b>{len(fit.rejections):,}</b> set aside{other}. "
         f"Model: {_model(fit)}."
     )
@@ -215,7 +220,7 @@ def _status(fit: Fit, key: str) -> str:
 def _overview(pictures: dict[str, bytes], slices: Sequence[ExpirySlice]) -> str:
     wide, narrow = _data(pictures["smiles"]), _data(pictures["smiles_narrow"])
     all_smiles = (
-        "<figure class='wide'><picture>"
+        f"<figure class='wide' style='max-width: {290 * min(len(slices), 4)}px'><picture>"
         f"<source media='(max-width: 700px)' srcset='{narrow}'>"
         f"<img src='{wide}' alt='All smiles: quoted bid-ask ranges and the model curve'></picture>"
         "<figcaption>Every expiry on the same axes. Bars: quoted bid to ask; line: model. "
@@ -286,12 +291,13 @@ def _forwards(fit: Fit) -> str:
     rows = []
     for label, p in zip(labels, points, strict=True):
         rate = -math.log(p.discount) / p.maturity if p.discount > 0.0 and p.maturity > 0.0 else 0.0
+        places = price_decimals(p.forward)
         rows.append(
             (
                 label,
                 f"{365.0 * p.maturity:,.1f}",
-                f"{p.forward:,.2f}",
-                f"{p.forward_error:,.2f}" if math.isfinite(p.forward_error) else "–",
+                f"{p.forward:,.{places}f}",
+                f"{p.forward_error:,.{places}f}" if math.isfinite(p.forward_error) else "–",
                 f"{p.discount:.6f}",
                 _signed(f"{100.0 * rate:.2f}"),
                 f"{p.pairs}",
@@ -450,7 +456,7 @@ td.w { white-space: normal; overflow-wrap: anywhere; min-width: 15em; }
 details { margin-top: 14px; }
 summary { cursor: pointer; color: var(--blue); font-weight: 600; }
 figure { margin: 0; }
-figure.wide { margin-bottom: 26px; }
+figure.wide { margin-bottom: 26px; min-width: min(100%, 460px); }
 figcaption { margin-top: 4px; }
 img { display: block; width: 100%; height: auto; }
 .pictures { display: grid; grid-template-columns: repeat(2, minmax(0, 1fr)); gap: 28px 30px;

@@ -161,6 +161,11 @@ def expiry_labels(expiries: NDArray[np.datetime64]) -> list[str]:
     ]
 
 
+def price_decimals(price: float) -> int:
+    """Decimals that show a price to about six digits."""
+    return min(max(5 - math.floor(math.log10(price)), 0), 6) if price > 0.0 else 2
+
+
 @dataclass(frozen=True)
 class Skew:
     """At-the-money skew, d volatility / d log-moneyness at the forward, by maturity.
