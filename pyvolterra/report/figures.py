@@ -218,7 +218,7 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
 
 def skew_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> bytes:
     """At-the-money skew against maturity on logarithmic axes."""
-    market = market_skew(slices)
+    market = market_skew(fit.model, slices)
     times = _log_grid(np.array([s.maturity for s in slices]), 40)
     skew = model_skew(fit.model, times)
     signs = np.sign(np.concatenate([market.market, skew[np.isfinite(skew)]]))

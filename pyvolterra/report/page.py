@@ -230,8 +230,8 @@ def _overview(pictures: dict[str, bytes], slices: Sequence[ExpirySlice]) -> str:
         (
             "skew",
             "At-the-money skew by maturity, market and model, logarithmic axes",
-            "Market: slope at the forward of a local cubic through the mid volatilities. The guide "
-            "is the short-dated power law T^(H − 1/2), drawn from the first expiry.",
+            "Market: the model's skew plus the local slope of mid less model. The guide is the "
+            "short-dated power law T^(H − 1/2), drawn from the first expiry.",
         ),
         (
             "forward_volatility",
@@ -267,9 +267,9 @@ def _quality(slices: Sequence[ExpirySlice]) -> str:
         )
         for s in slices
     ]
-    head = ("expiry", "days", "quotes", "ATM vol. %", "rms bp", "inside %", "worst")
+    head = ("expiry", "days", "quotes", "ATM %", "rms bp", "inside %", "worst")
     return _table(head, rows, numeric=range(1, 7)) + (
-        "<p class='note'>ATM vol.: of the model, at the forward. Worst: the largest residual in "
+        "<p class='note'>ATM: volatility of the model at the forward. Worst: the largest residual in "
         "half-widths, beyond ±1 outside bid–ask.</p>"
     )
 
@@ -471,7 +471,8 @@ dd { margin: 0; max-width: 56em; }
   .pictures { grid-template-columns: minmax(0, 1fr); }
   dl { grid-template-columns: 1fr; gap: 2px; }
   dd { margin-bottom: 10px; }
-  th, td { padding-right: 12px; }
+  table { font-size: 13px; }
+  th, td { padding-right: 9px; }
   .card strong { font-size: 20px; }
   td.w { min-width: 24em; }
 }
