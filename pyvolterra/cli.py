@@ -57,7 +57,7 @@ def _demo(options: argparse.Namespace) -> int:
 
     folder.mkdir(exist_ok=True)
     quotes = write_demo_quotes(folder / DEMO_QUOTES)
-    print(f"invented quotes  {quotes}")
+    print(f"invented quotes  {quotes}", flush=True)
     return _fit_and_report(quotes, folder, strict=False, mean_reversion=0.0)
 
 

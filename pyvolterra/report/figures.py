@@ -145,7 +145,7 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
     text: dict[str, Any] = {"fontsize": 10, "color": INK}
     figure.text(0.5, 0.08 / height, x_label, ha="center", **text)
     figure.text(0.06 / width, 0.5, "implied volatility (%)", va="center", rotation=90, **text)
-    _key(figure, _smile_key(True), 0.62, height - 0.17)
+    _key(figure, _smile_key(any(not s.inside.all() for s in slices)), 0.62, height - 0.17)
     return _png(figure)
 
 

@@ -269,8 +269,8 @@ def _quality(slices: Sequence[ExpirySlice]) -> str:
     ]
     head = ("expiry", "days", "quotes", "ATM %", "rms bp", "inside %", "worst")
     return _table(head, rows, numeric=range(1, 7)) + (
-        "<p class='note'>ATM: volatility of the model at the forward. Worst: the largest residual in "
-        "half-widths, beyond ±1 outside bid–ask.</p>"
+        "<p class='note'>ATM: volatility of the model at the forward. Worst: the largest residual "
+        "in half-widths, beyond ±1 outside bid–ask.</p>"
     )
 
 
