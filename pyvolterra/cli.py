@@ -13,7 +13,7 @@ import warnings
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, NoReturn, TextIO
+from typing import TYPE_CHECKING, NoReturn, TextIO
 
 import numpy as np
 
@@ -38,10 +38,13 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """
     try:
         options = _parser().parse_args(arguments)
-        with warnings.catch_warnings():
-            warnings.showwarning = _show_warning
-            command: Callable[[argparse.Namespace], int] = options.command
-            return command(options)
+        command: Callable[[argparse.Namespace], int] = options.command
+        # Kept until the progress line is gone; one line each, without the path of a source file.
+        with warnings.catch_warnings(record=True) as caught:
+            status = command(options)
+        for text in dict.fromkeys(_one_line(warning.message) for warning in caught):
+            print(f"pyvolterra: warning: {text}", file=sys.stderr)
+        return status
     except KeyboardInterrupt:
         print("pyvolterra: interrupted", file=sys.stderr)
         return INTERRUPTED
@@ -253,10 +256,6 @@ def _plain_line(stream: TextIO) -> Iterator[Callable[[str], None]]:
     finally:
         stream.write("\r" + " " * length + "\r")
         stream.flush()
-
-
-def _show_warning(message: Warning | str, *rest: Any, **more: Any) -> None:
-    print(f"pyvolterra: warning: {_one_line(message)}", file=sys.stderr)
 
 
 def _one_line(message: object) -> str:
