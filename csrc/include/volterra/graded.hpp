@@ -1,42 +1,56 @@
-// Stub order: see the driver in graded_transform.hpp. One block of lanes on one graded mesh.
+// The graded scheme for one block of lanes: psi = K * [c0 + c1 psi + c2 psi^2] on a geometric mesh.
 //
-// psi_i = h_i + sum_j W_ij G_j on every element, G = left^alpha F: the history h is a product with
-// small dense blocks that depend on the lag only, the element itself is a nonlinear system of m
-// unknowns per lane.
+// With G = left^alpha F, the nodes of an element satisfy psi = h + W G(psi), W one real m x m block
+// for all elements and lanes, h the history. W^-1 = Q S Q^T is kept in real Schur form, and one
+// Newton step with a common derivative d costs two small real products and a triangular solve,
+//
+//     psi <- Q (S - d)^-1 [ Q^T W^-1 h + Q^T (G(psi) - d psi) ],
+//
+// with no factorisation per lane. Q^T W^-1 is already contained in the history weights of the plan.
+// Where this does not converge, and on the first element, full Newton steps with elimination follow.
+//
+// Every lane is iterated until its own test is met and then left alone: its bits do not depend on
+// the other lanes. No allocation, no exceptions, no standard-library templates: see simd.hpp.
 #pragma once
 
 #include "volterra/simd.hpp"
 
 namespace volterra {
 
-// One block's work order. Split rows: `lanes` real parts, then `lanes` imaginary parts.
+// One block's work order. All rows are split: `lanes` real parts, then `lanes` imaginary parts.
 struct graded_block {
     const double* c0;  // 2 x lanes
     const double* c1;  // 2 x lanes
     double c2;
-    double alpha;
     std::size_t nodes;     // m
-    std::size_t elements;  // the first one included
-    const double* scales;  // elements: left^alpha (the first element has that of the second)
-    const double* times;   // 1 + elements x m, node times; times[0] = 0
-    // blocks of graded_weights.hpp
-    const double *first, *own_left, *own, *lag, *from_first, *extrapolation, *leading;
-    // linear functionals: value_r = sum_n f[r][n] G_n + psi[r][n] psi_n, n over 1 + elements x m
+    std::size_t elements;  // of this mesh, the first one included
+    const double* scales;  // elements - 1: left^alpha of all but the first, which has scales[0]
+    const double* powers;  // m: (node/b)^alpha on the first element
+    // from graded_plan
+    const double *first, *own, *q, *q_transposed, *s, *to_history, *from_first, *lag,
+        *extrapolation, *tau_power, *series;
+    std::size_t lags;  // blocks in `lag`
+    bool paired;
+    // linear functionals: value_r = sum_n f[n][r] (G + left^alpha mix psi)_n + p[n][r] psi_n
     std::size_t functionals;
-    const double* weights_f;
-    const double* weights_psi;        // or null
-    const std::size_t* first_active;  // per element: the functionals from this one on use it
+    double mix;
+    const double* first_f;            // (m + 1) x functionals: t = 0 and the first element
+    const double* first_psi;          // the same, or null
+    const double* weights_f;          // (elements - 1) m x functionals
+    const double* weights_psi;        // the same, or null
+    const std::size_t* first_active;  // [1 .. elements - 1]: functionals before it do not use it
+    double accuracy;                  // relative accuracy asked of psi at the nodes
     double* values;                   // functionals x 2 x lanes
-    double* psi;                      // (1 + elements x m) x 2 x lanes, or null
-    double* status;                   // lanes: 0 solved; k + 1 if element k failed
-    double* history;                  // workspace
+    double* psi;                      // (1 + elements m) x 2 x lanes, or null
+    double* status;                   // lanes: 0 solved, k + 1 if the solver failed on element k
+    double* workspace;                // graded_workspace doubles
 };
 
 inline constexpr std::size_t graded_most_nodes = 10;
 
 inline constexpr std::size_t graded_workspace(std::size_t nodes, std::size_t elements,
                                               std::size_t lanes) {
-    return (1 + nodes * elements + 4 * graded_most_nodes) * 2 * lanes;
+    return (1 + nodes * elements + 4 * (nodes + 1)) * 2 * lanes;
 }
 
 }  // namespace volterra
@@ -45,20 +59,28 @@ namespace volterra::VOLTERRA_TARGET {
 
 namespace graded_detail {
 
-inline constexpr std::size_t packs = pack_width == 8 ? 2 : (pack_width == 4 ? 1 : 2);
+inline constexpr std::size_t packs = pack_width == 8 ? 2 : 1;
 inline constexpr std::size_t lanes = packs * pack_width;
 inline constexpr std::size_t row = 2 * lanes;
+inline constexpr std::size_t row_packs = 2 * packs;
+
+typedef decltype(pack{} < pack{}) mask;
 
 VOLTERRA_INLINE complex_pack load_complex(const double* p) { return {load(p), load(p + lanes)}; }
 VOLTERRA_INLINE void store_complex(double* p, complex_pack z) {
     store(p, z.re);
     store(p + lanes, z.im);
 }
-VOLTERRA_INLINE complex_pack select(decltype(pack{} < pack{}) mask, complex_pack a,
-                                    complex_pack b) {
-    return {mask ? a.re : b.re, mask ? a.im : b.im};
+VOLTERRA_INLINE complex_pack select(mask which, complex_pack a, complex_pack b) {
+    return {which ? a.re : b.re, which ? a.im : b.im};
 }
 VOLTERRA_INLINE pack norm(complex_pack z) { return z.re * z.re + z.im * z.im; }
+VOLTERRA_INLINE pack larger(pack a, pack b) { return a > b ? a : b; }
+VOLTERRA_INLINE bool any(mask which) {
+    long long bits = 0;
+    for (std::size_t i = 0; i < pack_width; ++i) bits |= which[i];
+    return bits != 0;
+}
 // a / b, and 0 where b = 0.
 VOLTERRA_INLINE complex_pack safe_divide(complex_pack a, complex_pack b) {
     const pack size = norm(b);
@@ -66,83 +88,89 @@ VOLTERRA_INLINE complex_pack safe_divide(complex_pack a, complex_pack b) {
     return {(a.re * b.re + a.im * b.im) * scale, (a.im * b.re - a.re * b.im) * scale};
 }
 
-// out[i] += sum_j w[i * stride + j] in[j]; rows of `in` and `out` are split lane rows.
-template <std::size_t m>
-VOLTERRA_INLINE void multiply_add(const double* w, std::size_t stride, const double* in,
-                                  std::size_t columns, double* out) {
-    constexpr std::size_t tile = m % 2 == 0 && m > 6 ? m / 2 : m;
-    for (std::size_t top = 0; top < m; top += tile) {
-        pack acc[tile][2 * packs];
-        for (std::size_t i = 0; i < tile; ++i)
-            for (std::size_t c = 0; c < 2 * packs; ++c)
-                acc[i][c] = load(out + (top + i) * row + c * pack_width);
-        for (std::size_t j = 0; j < columns; ++j) {
-            pack x[2 * packs];
-            for (std::size_t c = 0; c < 2 * packs; ++c) x[c] = load(in + j * row + c * pack_width);
-            for (std::size_t i = 0; i < tile; ++i) {
-                const pack a = broadcast(w[(top + i) * stride + j]);
-                for (std::size_t c = 0; c < 2 * packs; ++c) acc[i][c] += a * x[c];
-            }
+// acc[i] += sum_j w[j * m + i] in[j] for the rows i of one tile, the weights column-major.
+template <std::size_t rows>
+VOLTERRA_INLINE void multiply_tile(pack (&acc)[rows][row_packs], const double* w, std::size_t m,
+                                   const double* in, std::size_t columns) {
+    for (std::size_t j = 0; j < columns; ++j) {
+        pack x[row_packs];
+        for (std::size_t c = 0; c < row_packs; ++c) x[c] = load(in + j * row + c * pack_width);
+        for (std::size_t i = 0; i < rows; ++i) {
+            const pack a = broadcast(w[j * m + i]);
+            for (std::size_t c = 0; c < row_packs; ++c) acc[i][c] += a * x[c];
         }
-        for (std::size_t i = 0; i < tile; ++i)
-            for (std::size_t c = 0; c < 2 * packs; ++c)
+    }
+}
+
+// Rows per register tile: accumulators, one row of input and one weight have to fit.
+template <std::size_t m>
+inline constexpr std::size_t tile_rows = m <= 6 ? m : m / 2;
+
+// out = (add ? out : 0) + W in
+template <std::size_t m>
+VOLTERRA_INLINE void multiply(const double* w, const double* in, std::size_t columns, double* out) {
+    constexpr std::size_t rows = tile_rows<m>;
+    for (std::size_t top = 0; top < m; top += rows) {
+        pack acc[rows][row_packs] = {};
+        multiply_tile<rows>(acc, w + top, m, in, columns);
+        for (std::size_t i = 0; i < rows; ++i)
+            for (std::size_t c = 0; c < row_packs; ++c)
                 store(out + (top + i) * row + c * pack_width, acc[i][c]);
     }
 }
 
+// The quadratic of one element: s (c0 + c1 psi + c2 psi^2).
+struct quadratic {
+    complex_pack c0, c1;
+    pack c2;
+    VOLTERRA_INLINE complex_pack value(complex_pack x) const { return c0 + (c1 + c2 * x) * x; }
+    VOLTERRA_INLINE complex_pack derivative(complex_pack x) const { return c1 + (2.0 * c2) * x; }
+};
+
+VOLTERRA_INLINE quadratic scaled(const graded_block& b, std::size_t c, double scale) {
+    const pack s = broadcast(scale);
+    return {s * load_complex(b.c0 + c), s * load_complex(b.c1 + c), s * broadcast(b.c2)};
+}
+
 // A rational function of z = t^alpha with the first three terms of psi's power series and its
 // limit, the stable root of the quadratic: psi = z (p0 + p1 z) / (1 + q1 z + q2 z^2).
-struct starting_guess {
+struct global_guess {
     complex_pack p0, p1, q1, q2;
     VOLTERRA_INLINE complex_pack at(double z) const {
         const pack x = broadcast(z);
-        complex_pack numerator = p0 + x * p1;
-        complex_pack denominator = q1 + x * q2;
-        denominator = x * denominator;
+        complex_pack denominator = x * (q1 + x * q2);
         denominator.re += 1.0;
-        return safe_divide(x * numerator, denominator);
+        return safe_divide(x * (p0 + x * p1), denominator);
     }
 };
 
-VOLTERRA_INLINE complex_pack stable_root(complex_pack c0, complex_pack c1, pack c2) {
-    const complex_pack s = sqrt(c1 * c1 - (4.0 * c2) * c0);
-    return safe_divide(broadcast(2.0) * c0, s - c1);
-}
-
-VOLTERRA_INLINE starting_guess make_guess(complex_pack c0, complex_pack c1, pack c2, double alpha) {
-    const double g1 = __builtin_tgamma(1 + alpha), g2 = __builtin_tgamma(1 + 2 * alpha),
-                 g3 = __builtin_tgamma(1 + 3 * alpha);
-    const complex_pack r = stable_root(c0, c1, c2);
-    const complex_pack b0 = broadcast(1 / g1) * c0;
-    const complex_pack b1 = broadcast(g1 / g2) * (c1 * b0);
-    const complex_pack b2 = broadcast(g2 / g3) * (c1 * b1 + c2 * (b0 * b0));
+VOLTERRA_INLINE global_guess make_guess(const quadratic& f, const double* series) {
+    const complex_pack root = sqrt(f.c1 * f.c1 - (4.0 * f.c2) * f.c0);
+    const complex_pack r = safe_divide(broadcast(2.0) * f.c0, root - f.c1);
+    const complex_pack b0 = broadcast(series[0]) * f.c0;
+    const complex_pack b1 = broadcast(series[1]) * (f.c1 * b0);
+    const complex_pack b2 = broadcast(series[2]) * (f.c1 * b1 + f.c2 * (b0 * b0));
     const complex_pack q2 = safe_divide(b1 * b1 - b0 * b2, r * b1 + b0 * b0);
-    const complex_pack q1 = safe_divide(r * q2 - b1, b0);
-    return {b0, r * q2, q1, q2};
+    return {b0, r * q2, safe_divide(r * q2 - b1, b0), q2};
 }
 
-// One Newton step of psi = h + W G(psi) for one pack of lanes; returns the size of the step.
+// One full Newton step of psi = h + W G(psi), W column-major, for one pack of lanes. Returns the
+// largest squared component of the step; `damping` multiplies it.
 template <std::size_t m>
-inline pack newton_step(const double* w, std::size_t stride, complex_pack c0, complex_pack c1,
-                        pack c2, const double* h, double* psi) {
-    complex_pack a[m][m], r[m], g[m], d[m];
+inline pack newton_step(const double* w, const quadratic& f, const double* h, double* psi,
+                        double damping) {
+    complex_pack a[m][m], r[m];
+    for (std::size_t j = 0; j < m; ++j) r[j] = load_complex(h + j * row) - load_complex(psi + j * row);
     for (std::size_t j = 0; j < m; ++j) {
-        const complex_pack x = load_complex(psi + j * row);
-        const complex_pack cx = c2 * x;
-        g[j] = c0 + (c1 + cx) * x;
-        d[j] = c1 + cx + cx;
-        r[j] = load_complex(h + j * row) - x;
-    }
-    for (std::size_t i = 0; i < m; ++i)
-        for (std::size_t j = 0; j < m; ++j) {
-            const pack wij = broadcast(w[i * stride + j]);
-            r[i] = r[i] + wij * g[j];
-            a[i][j] = {-wij * d[j].re, -wij * d[j].im};
-            if (i == j) a[i][j].re += 1.0;
+        const complex_pack x = load_complex(psi + j * row), g = f.value(x), d = f.derivative(x);
+        for (std::size_t i = 0; i < m; ++i) {
+            const pack wij = broadcast(w[j * m + i]);
+            r[i] = r[i] + wij * g;
+            a[i][j] = {(i == j ? 1.0 : 0.0) - wij * d.re, -wij * d.im};
         }
+    }
     for (std::size_t k = 0; k < m; ++k) {
-        const complex_pack one = {broadcast(1.0), broadcast(0.0)};
-        const complex_pack inverse = one / a[k][k];
+        const complex_pack inverse = complex_pack{broadcast(1.0), broadcast(0.0)} / a[k][k];
         r[k] = r[k] * inverse;
         for (std::size_t j = k + 1; j < m; ++j) a[k][j] = a[k][j] * inverse;
         for (std::size_t i = k + 1; i < m; ++i) {
@@ -153,79 +181,236 @@ inline pack newton_step(const double* w, std::size_t stride, complex_pack c0, co
     pack size = broadcast(0.0);
     for (std::size_t k = m; k-- > 0;) {
         for (std::size_t j = k + 1; j < m; ++j) r[k] = r[k] - a[k][j] * r[j];
-        const pack n = norm(r[k]);
-        size = n > size ? n : size;
+        size = larger(norm(r[k]), size);
+        store_complex(psi + k * row, load_complex(psi + k * row) + broadcast(damping) * r[k]);
     }
-    for (std::size_t k = 0; k < m; ++k)
-        store_complex(psi + k * row, load_complex(psi + k * row) + r[k]);
     return size;
 }
 
+// Full Newton for the lanes of `open`; returns the lanes that did not converge.
+template <std::size_t m>
+inline mask newton(const double* w, const quadratic& f, const double* h, double* psi, mask open,
+                   double accuracy) {
+    const double goal = accuracy * accuracy, sharp = 1e-28;
+    for (int step = 0; step < 40 && any(open); ++step) {
+        complex_pack before[m];
+        for (std::size_t j = 0; j < m; ++j) before[j] = load_complex(psi + j * row);
+        // after 12 plain steps, half steps: they calm a cycle
+        const pack size = newton_step<m>(w, f, h, psi, step < 12 ? 1.0 : 0.5);
+        pack scale = broadcast(0.0);
+        for (std::size_t j = 0; j < m; ++j) {
+            const complex_pack x = select(open, load_complex(psi + j * row), before[j]);
+            store_complex(psi + j * row, x);
+            scale = larger(scale, norm(x));
+        }
+        // The step that follows one of relative size e has relative size e^2 or so.
+        const double bound = step < 12 ? (goal > sharp ? __builtin_sqrt(goal) * 1e-2 : 1e-16) : sharp;
+        open = open & ~(size <= larger(broadcast(bound), broadcast(sharp)) * scale);
+    }
+    return open;
+}
+
+// The factors of (S - d)^-1 for one pack: per 2 x 2 block its inverse.
+template <std::size_t m>
+struct shifted_factors {
+    complex_pack f11[m / 2], f22[m / 2], inverse[m / 2];
+};
+
+template <std::size_t m>
+VOLTERRA_INLINE void factor(const double* s, complex_pack d, shifted_factors<m>& to) {
+    for (std::size_t k = 0; k < m; k += 2) {
+        const double s12 = s[k * m + k + 1], s21 = s[(k + 1) * m + k];
+        const complex_pack p = {s[k * m + k] - d.re, -d.im};
+        const complex_pack q = {s[(k + 1) * m + k + 1] - d.re, -d.im};
+        complex_pack det = p * q;
+        det.re -= s12 * s21;
+        const complex_pack inverse = complex_pack{broadcast(1.0), broadcast(0.0)} / det;
+        to.inverse[k / 2] = inverse;
+        to.f11[k / 2] = q * inverse;
+        to.f22[k / 2] = p * inverse;
+    }
+}
+
+// y <- (S - d)^-1 y for one pack.
+template <std::size_t m>
+VOLTERRA_INLINE void solve_shifted(const double* s, const shifted_factors<m>& f, complex_pack (&y)[m]) {
+    for (std::size_t k = m; k >= 2; k -= 2) {
+        complex_pack &one = y[k - 2], &two = y[k - 1];
+        for (std::size_t j = k; j < m; ++j) {
+            one = one - broadcast(s[(k - 2) * m + j]) * y[j];
+            two = two - broadcast(s[(k - 1) * m + j]) * y[j];
+        }
+        const std::size_t p = k / 2 - 1;
+        const complex_pack a = broadcast(s[(k - 2) * m + k - 1]) * (f.inverse[p] * two);
+        const complex_pack b = broadcast(s[(k - 1) * m + k - 2]) * (f.inverse[p] * one);
+        one = f.f11[p] * one - a;
+        two = f.f22[p] * two - b;
+    }
+}
+
+// values += f-weights (G + mix psi) + psi-weights psi over the nodes of one element.
+template <std::size_t m>
+VOLTERRA_INLINE void accumulate_functionals(const graded_block& b, std::size_t k, const double* g,
+                                            const double* psi) {
+    const std::size_t at = k ? (k - 1) * m * b.functionals : b.functionals;
+    const double* const weights_f = (k ? b.weights_f : b.first_f) + at;
+    const double* const weights_psi = b.weights_psi ? (k ? b.weights_psi : b.first_psi) + at : nullptr;
+    constexpr std::size_t tile = 3;
+    std::size_t r = k ? b.first_active[k] : 0;
+    auto rows = [&]<std::size_t n>() {
+        pack acc[n][row_packs];
+        for (std::size_t i = 0; i < n; ++i)
+            for (std::size_t c = 0; c < row_packs; ++c)
+                acc[i][c] = load(b.values + (r + i) * row + c * pack_width);
+        multiply_tile<n>(acc, weights_f + r, b.functionals, g, m);
+        if (weights_psi)
+            multiply_tile<n>(acc, weights_psi + r, b.functionals, psi, m);
+        for (std::size_t i = 0; i < n; ++i)
+            for (std::size_t c = 0; c < row_packs; ++c)
+                store(b.values + (r + i) * row + c * pack_width, acc[i][c]);
+    };
+    for (; r + tile <= b.functionals; r += tile) rows.template operator()<tile>();
+    for (; r < b.functionals; ++r) rows.template operator()<1>();
+}
+
+#ifdef GX_COUNT
+inline long gx_count[64], gx_blocks[64];
+#endif
 template <std::size_t m>
 inline void solve(const graded_block& b) {
-    const std::size_t nodes = 1 + m * b.elements;
-    double* const G = b.history;
-    double* const h = G + nodes * row;
-    double* const psi = h + m * row;
+    double* const G = b.workspace;                          // 1 + elements m rows
+    double* const h = G + (1 + m * b.elements) * row;       // m rows
+    double* const y = h + m * row;                          // m rows
+    double* const psi_edge = y + m * row;                   // m + 1 rows: left edge, then nodes
+    double* const psi = psi_edge + row;
+    double* const mixed = psi_edge + (m + 1) * row;         // m rows
 
     std::memset(b.values, 0, b.functionals * row * sizeof(double));
     std::memset(b.status, 0, lanes * sizeof(double));
-    for (std::size_t c = 0; c < row; c += pack_width)
+    for (std::size_t c = 0; c < row; c += pack_width) {
         store(G + c, b.scales[0] * load(b.c0 + c));
-    if (b.psi) std::memset(b.psi, 0, row * sizeof(double));
+        store(psi_edge + c, broadcast(0.0));
+        if (b.psi) store(b.psi + c, broadcast(0.0));
+        for (std::size_t r = 0; r < b.functionals; ++r)
+            store(b.values + r * row + c, b.first_f[r] * load(G + c));
+    }
 
     for (std::size_t k = 0; k < b.elements; ++k) {
         double* const g = G + (1 + k * m) * row;  // this element's nodes
-        std::memset(h, 0, m * row * sizeof(double));
-        const double* w = k ? b.own : b.first + 1;
-        const std::size_t stride = k ? m : m + 1;
+        const double scale = b.scales[k ? k - 1 : 0];
+        auto fail = [&](mask open, std::size_t c) {
+            for (std::size_t i = 0; i < pack_width; ++i)
+                if (open[i] && b.status[c + i] == 0.0) b.status[c + i] = static_cast<double>(k + 1);
+        };
         if (k == 0) {
-            multiply_add<m>(b.first, m + 1, G, 1, h);
+            multiply<m>(b.first, G, 1, h);
+            for (std::size_t c = 0; c < lanes; c += pack_width) {
+                const quadratic f = scaled(b, c, scale);
+                const global_guess guess = make_guess(scaled(b, c, 1.0), b.series);
+                for (std::size_t j = 0; j < m; ++j)
+                    store_complex(psi + j * row + c, guess.at(scale * b.powers[j]));
+                fail(newton<m>(b.first + m, f, h + c, psi + c, f.c2 == f.c2, b.accuracy), c);
+            }
         } else {
-            multiply_add<m>(b.from_first + (k - 1) * m * (m + 1), m + 1, G, m + 1, h);
-            for (std::size_t l = 1; l < k; ++l)
-                multiply_add<m>(b.lag + (k - l - 1) * m * m, m, G + (1 + l * m) * row, m, h);
+            constexpr std::size_t rows = tile_rows<m>;
+            for (std::size_t top = 0; top < m; top += rows) {
+                pack acc[rows][row_packs] = {};
+                multiply_tile<rows>(acc, b.from_first + (k - 1) * m * (m + 1) + top, m, G, m + 1);
+                multiply_tile<rows>(acc, b.lag + (b.lags + 1 - k) * m * m + top, m,
+                                    G + (1 + m) * row, (k - 1) * m);
+                for (std::size_t i = 0; i < rows; ++i)
+                    for (std::size_t c = 0; c < row_packs; ++c)
+                        store(h + (top + i) * row + c * pack_width, acc[i][c]);
+            }
+            quadratic f[packs];
+            for (std::size_t p = 0; p < packs; ++p) f[p] = scaled(b, p * pack_width, scale);
+            if (k == 1) {
+                std::memcpy(psi_edge, psi + (m - 1) * row, row * sizeof(double));
+                for (std::size_t p = 0; p < packs; ++p) {
+                    const std::size_t c = p * pack_width;
+                    const global_guess guess = make_guess(scaled(b, c, 1.0), b.series);
+                    for (std::size_t j = 0; j < m; ++j)
+                        store_complex(psi + j * row + c, guess.at(scale * b.tau_power[j]));
+                }
+            } else {
+                multiply<m>(b.extrapolation, psi_edge, m + 1, y);
+                std::memcpy(psi_edge, psi + (m - 1) * row, row * sizeof(double));
+                std::memcpy(psi, y, m * row * sizeof(double));
+            }
+            mask open[packs];
+            pack last[packs];
+            complex_pack d[packs];
+            shifted_factors<m> factors[packs];
+            for (std::size_t p = 0; p < packs; ++p) {
+                open[p] = f[p].c2 == f[p].c2;
+                last[p] = broadcast(0.0);
+                d[p] = f[p].derivative(load_complex(psi + (m / 2) * row + p * pack_width));
+                factor<m>(b.s, d[p], factors[p]);
+            }
+            bool working = b.paired;
+#ifdef GX_COUNT
+            gx_blocks[k]++;
+#endif
+            for (int step = 0; step < 12 && working; ++step) {
+                for (std::size_t j = 0; j < m; ++j)
+                    for (std::size_t p = 0; p < packs; ++p) {
+                        const complex_pack x = load_complex(psi + j * row + p * pack_width);
+                        store_complex(g + j * row + p * pack_width,
+                                      f[p].c0 + (f[p].c1 - d[p] + f[p].c2 * x) * x);
+                    }
+                multiply<m>(b.q_transposed, g, m, y);
+                for (std::size_t p = 0; p < packs; ++p) {
+                    complex_pack z[m];
+                    const std::size_t c = p * pack_width;
+                    for (std::size_t j = 0; j < m; ++j)
+                        z[j] = load_complex(y + j * row + c) + load_complex(h + j * row + c);
+                    solve_shifted<m>(b.s, factors[p], z);
+                    for (std::size_t j = 0; j < m; ++j) store_complex(y + j * row + c, z[j]);
+                }
+                multiply<m>(b.q, y, m, mixed);
+                working = false;
+#ifdef GX_COUNT
+                gx_count[k]++;
+#endif
+                for (std::size_t p = 0; p < packs; ++p) {
+                    const std::size_t c = p * pack_width;
+                    pack size = broadcast(0.0), height = broadcast(0.0);
+                    for (std::size_t j = 0; j < m; ++j) {
+                        const complex_pack x = load_complex(mixed + j * row + c);
+                        const complex_pack old = load_complex(psi + j * row + c);
+                        size = larger(size, norm(x - old));
+                        height = larger(height, norm(x));
+                        store_complex(psi + j * row + c, select(open[p], x, old));
+                    }
+                    // What is left is the last step times theta/(1 - theta), theta the observed
+                    // contraction, 0.3 before one has been seen.
+                    const pack theta2 = step ? size / last[p] : broadcast(0.09);
+                    const pack goal = height * (b.accuracy * b.accuracy);
+                    last[p] = size;
+                    open[p] = open[p] & ~((size * theta2 <= 0.25 * goal) & (theta2 < 0.25));
+                    open[p] = open[p] & ~(size <= 1e-30 * height);
+                    working |= any(open[p]);
+                }
+            }
+            if (working || !b.paired) {
+                multiply<m>(b.to_history, h, m, y);
+                for (std::size_t p = 0; p < packs; ++p) {
+                    const std::size_t c = p * pack_width;
+                    open[p] = newton<m>(b.own, f[p], y + c, psi + c, open[p], b.accuracy);
+                    fail(open[p], c);
+                }
+            }
         }
-        const pack s = broadcast(b.scales[k]);
         for (std::size_t c = 0; c < lanes; c += pack_width) {
-            const complex_pack a0 = load_complex(b.c0 + c), a1 = load_complex(b.c1 + c);
-            const pack a2 = broadcast(b.c2);
-            const complex_pack c0 = s * a0, c1 = s * a1;
-            const pack c2 = s * a2;
-            const starting_guess guess = make_guess(a0, a1, a2, b.alpha);
-            for (std::size_t j = 0; j < m; ++j) {
-                const double z = __builtin_pow(b.times[1 + k * m + j], b.alpha);
-                store_complex(psi + j * row + c, guess.at(z));
-            }
-            for (int it = 0; it < 30; ++it) {
-                const pack size = newton_step<m>(w, stride, c0, c1, c2, h + c, psi + c);
-                const pack scale = norm(load_complex(psi + (m - 1) * row + c));
-                bool done = true;
-                for (std::size_t i = 0; i < pack_width; ++i)
-                    done = done && (size[i] <= 1e-28 * scale[i]);
-                if (done) break;
-                if (it == 29)
-                    for (std::size_t i = 0; i < pack_width; ++i)
-                        if (!(size[i] <= 1e-20 * scale[i])) b.status[c + i] = k + 1.0;
-            }
+            const quadratic f = scaled(b, c, scale);
             for (std::size_t j = 0; j < m; ++j) {
                 const complex_pack x = load_complex(psi + j * row + c);
-                store_complex(g + j * row + c, c0 + (c1 + c2 * x) * x);
+                store_complex(g + j * row + c, f.value(x));
+                store_complex(mixed + j * row + c, f.value(x) + broadcast(scale * b.mix) * x);
             }
         }
         if (b.psi) std::memcpy(b.psi + (1 + k * m) * row, psi, m * row * sizeof(double));
-        for (std::size_t r = b.first_active[k]; r < b.functionals; ++r) {
-            const std::size_t begin = k ? 1 + k * m : 0, end = 1 + (k + 1) * m;
-            for (std::size_t c = 0; c < row; c += pack_width) {
-                pack acc = load(b.values + r * row + c);
-                for (std::size_t n = begin; n < end; ++n)
-                    acc += b.weights_f[r * nodes + n] * load(G + n * row + c);
-                if (b.weights_psi)
-                    for (std::size_t j = 0; j < m; ++j)
-                        acc += b.weights_psi[r * nodes + 1 + k * m + j] * load(psi + j * row + c);
-                store(b.values + r * row + c, acc);
-            }
-        }
+        accumulate_functionals<m>(b, k, b.mix != 0.0 ? mixed : g, psi);
     }
 }
 
@@ -235,7 +420,7 @@ inline constexpr std::size_t graded_lanes = graded_detail::lanes;
 
 inline void solve_graded_block(const graded_block& block) {
     switch (block.nodes) {
-        case 5: return graded_detail::solve<5>(block);
+        case 4: return graded_detail::solve<4>(block);
         case 6: return graded_detail::solve<6>(block);
         case 8: return graded_detail::solve<8>(block);
         case 10: return graded_detail::solve<10>(block);

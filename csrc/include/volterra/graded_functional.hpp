@@ -6,6 +6,9 @@
 // F and psi are replaced by the interpolants the scheme itself uses and integrated exactly against
 // the step functions theta and xi by differences of primitives: a jump of the curve or a maturity
 // inside an element costs no accuracy.
+//
+// Meshes with the same horizon but different first elements share all other elements, so their
+// weights are made once; only those of the first element are made per mesh.
 #pragma once
 
 #include <algorithm>
@@ -14,119 +17,196 @@
 #include <span>
 #include <vector>
 
-#include "volterra/graded_weights.hpp"
+#include "volterra/graded_table.hpp"
 #include "volterra/model.hpp"
-#include "volterra/uniform_functional.hpp"
 
 namespace volterra {
 
-// Geometric mesh [0, b], [b, qb], ... up to the horizon; b = horizon / q^(elements - 1).
-struct graded_mesh {
-    std::size_t elements;
-    double first;                // b
-    std::vector<double> edges;   // 0, b, qb, ..., horizon
-    std::vector<double> scales;  // left^alpha per element, b^alpha for the first
-    std::vector<double> times;   // every node
+// Geometric meshes [0, b], [b, qb], ... up to a common horizon, b = horizon / q^(elements - 1).
+// The mesh of `most` elements has the edges 0, edges[0] .. edges[most - 1] = horizon; one of fewer
+// elements starts at edges[most - elements].
+struct graded_meshes {
+    const graded_plan* plan;
+    std::size_t most;
+    std::vector<double> edges;
+    std::vector<double> scales;  // edges^alpha
+
+    graded_meshes(const graded_plan& p, double horizon, std::size_t elements)
+        : plan(&p), most(elements), edges(elements), scales(elements) {
+        edges[most - 1] = horizon, scales[most - 1] = std::pow(horizon, p.alpha);
+        for (std::size_t e = most - 1; e-- > 0;) {
+            edges[e] = edges[e + 1] / p.shape->q;
+            scales[e] = scales[e + 1] / p.step_scale;
+        }
+    }
 };
 
-inline graded_mesh make_graded_mesh(const graded_weights& w, double horizon, std::size_t elements) {
-    const graded_shape& s = *w.shape;
-    graded_mesh mesh{elements, horizon * std::pow(s.q, 1.0 - static_cast<double>(elements)),
-                     {0.0}, {}, {0.0}};
-    for (std::size_t k = 0; k < elements; ++k) {
-        mesh.edges.push_back(k + 1 == elements ? horizon : mesh.first * std::pow(s.q, k));
-        mesh.scales.push_back(std::pow(mesh.edges[k ? k : 1], w.alpha));
-        for (std::size_t i = 1; i <= s.m; ++i)
-            mesh.times.push_back(k ? mesh.edges[k] * s.tau[i]
-                                   : mesh.first * std::pow(s.x[i], 1.0 / w.alpha));
-    }
-    return mesh;
-}
+// value_r = sum over the nodes n of f[n][r] left^alpha (F + mix psi)_n + psi[n][r] psi_n, the nodes
+// of the elements 1 .. most - 1, without what reaches a shared node from the element to its right.
+// Weights are node-major: `count` rows beside each other.
+struct graded_functional {
+    std::size_t count;
+    double mix;
+    bool uses_psi;
+    std::vector<double> f, psi;             // (most - 1) m x count
+    std::vector<double> left_f, left_psi;   // (most - 1) x count: left edge of element e
+    std::vector<std::size_t> first_active;  // most: rows before this one do not use element e
+};
+
+// The weights of the first element of one mesh: m + 1 nodes.
+struct first_element_functional {
+    std::vector<double> f, psi;
+};
 
 namespace detail {
 
-// Adds sign * level * int_0^t (interpolant) to the weights of the nodes.
-inline void add_primitive(const graded_weights& w, const graded_mesh& mesh, double t, double level,
-                          double* weights) {
-    if (t <= 0.0) return;
-    const graded_shape& s = *w.shape;
-    const std::size_t m = s.m, n1 = m + 1;
+// weights[j * stride] += level int_from^to (interpolant), 1 <= from < to <= q, on the unit element.
+inline void add_unit_piece(const graded_shape& s, double from, double to, double level,
+                           double* weights, std::size_t stride) {
+    const std::size_t n1 = s.m + 1;
+    if (from <= 1.0 && to >= s.q) {
+        for (std::size_t j = 0; j < n1; ++j) weights[j * stride] += level * s.total[j];
+        return;
+    }
     double values[64];
-    for (std::size_t k = 0; k < mesh.elements && t > mesh.edges[k]; ++k) {
-        double* at = weights + k * m;
-        const double left = mesh.edges[k], right = mesh.edges[k + 1];
-        if (k == 0) {
-            // int_0^s P*_p(z^alpha) ds by its monomials: small degree, and the element is short
-            const double end = std::min(t, right), z = std::pow(end / right, w.alpha);
-            double legendre[64];
-            double c_row[64];
+    for (const double end : {to, from}) {
+        if (end > 1.0) {
+            shifted_legendre(std::log(end) / s.log_q, s.primitive_terms, values);
+            for (std::size_t j = 0; j < n1; ++j)
+                weights[j * stride] += level * s.primitive_at(j, values);
+        }
+        level = -level;
+    }
+}
+
+// The same for the first element [0, 1] with its polynomials in s^alpha.
+inline void add_first_piece(const graded_plan& plan, double from, double to, double level,
+                            double* weights, std::size_t stride) {
+    const std::size_t n1 = plan.shape->m + 1;
+    double legendre[64], primitive[64];
+    for (const double end : {to, from}) {
+        if (end > 0.0) {
+            const double z = std::pow(end, plan.alpha);
             for (std::size_t p = 0; p < n1; ++p) {
-                // P*_p(z) = sum_c (-1)^(p+c) binom(p,c) binom(p+c,c) z^c
+                // int of P*_p(z) = sum_c (-1)^(p+c) binom(p,c) binom(p+c,c) z^c
                 double coefficient = p % 2 ? -1.0 : 1.0, power = 1.0, sum = 0.0;
                 for (std::size_t c = 0; c <= p; ++c) {
-                    sum += coefficient * power / (1.0 + w.alpha * static_cast<double>(c));
-                    const double x = static_cast<double>(c);
-                    coefficient *= -(static_cast<double>(p) - x) * (static_cast<double>(p) + x + 1) /
-                                   ((x + 1) * (x + 1));
+                    const double x = static_cast<double>(c), degree = static_cast<double>(p);
+                    sum += coefficient * power / (1.0 + plan.alpha * x);
+                    coefficient *= -(degree - x) * (degree + x + 1) / ((x + 1) * (x + 1));
                     power *= z;
                 }
                 legendre[p] = end * sum;
             }
-            to_nodes(s, legendre, c_row);
-            for (std::size_t j = 0; j < n1; ++j) at[j] += level * c_row[j];
-        } else if (t >= right) {
-            for (std::size_t j = 0; j < n1; ++j) at[j] += level * left * s.total[j];
-        } else {
-            const double x = std::log(t / left) / s.log_q;
-            shifted_legendre(x, s.primitive_terms, values);
-            for (std::size_t j = 0; j < n1; ++j) at[j] += level * left * s.primitive_at(j, values);
+            to_nodes(*plan.shape, legendre, primitive);
+            for (std::size_t j = 0; j < n1; ++j) weights[j * stride] += level * primitive[j];
         }
+        level = -level;
+    }
+}
+
+// Calls piece(row, acts_on_psi, from, to, level) for everything that is integrated.
+template <class Visit>
+void for_each_integral(const variance_curve& curve, std::span<const double> maturities, bool basis,
+                       Visit&& piece) {
+    const bool driven = curve.form == curve_form::driven;
+    const std::size_t per = basis ? curve.basis_size() : 1;
+    for (std::size_t t = 0; t < maturities.size(); ++t) {
+        if (driven) piece(t * per, false, 0.0, maturities[t], basis ? 1.0 : curve.initial);
+        for_each_reversed_piece(curve, maturities[t], [&](std::size_t k, double from, double to) {
+            const std::size_t row = t * per + (basis ? k + driven : 0);
+            piece(row, driven, from, to, basis ? 1.0 : curve.levels[k]);
+        });
     }
 }
 
 }  // namespace detail
 
-struct graded_rows {
-    functional_rows rows;                   // f acts on left^alpha F, as the kernel stores it
-    std::vector<std::size_t> first_active;  // per element
-};
-
 // One row per maturity (ascending), or per maturity and elementary curve when `basis`.
-inline graded_rows graded_functional(const graded_weights& w, const graded_mesh& mesh,
-                                     const variance_curve& curve, double mean_reversion,
-                                     std::span<const double> maturities, bool basis) {
+inline graded_functional make_functional(const graded_meshes& meshes, const variance_curve& curve,
+                                         double mean_reversion, std::span<const double> maturities,
+                                         bool basis) {
     const bool driven = curve.form == curve_form::driven;
-    const std::size_t m = w.nodes(), nodes = 1 + m * mesh.elements;
-    const std::size_t per = basis ? curve.basis_size() : 1;
-    graded_rows result;
-    functional_rows& rows = result.rows;
-    rows.count = per * maturities.size(), rows.nodes = nodes;
-    rows.f.assign(rows.count * nodes, 0.0);
-    rows.psi.assign(rows.count * nodes, 0.0);
-    for (std::size_t t = 0; t < maturities.size(); ++t) {
-        double* f = &rows.f[t * per * nodes];
-        double* psi = &rows.psi[t * per * nodes];
-        if (driven) detail::add_primitive(w, mesh, maturities[t], basis ? 1.0 : curve.initial, f);
-        for_each_reversed_piece(curve, maturities[t], [&](std::size_t k, double from, double to) {
-            const std::size_t row = basis ? (driven ? k + 1 : k) * nodes : 0;
-            const double level = basis ? 1.0 : curve.levels[k];
-            double* target = (driven ? psi : f) + row;
-            detail::add_primitive(w, mesh, to, level, target);
-            detail::add_primitive(w, mesh, from, -level, target);
+    const graded_shape& s = *meshes.plan->shape;
+    const std::size_t m = s.m, elements = meshes.most - 1;
+    graded_functional w{};
+    w.count = maturities.size() * (basis ? curve.basis_size() : 1);
+    w.mix = driven ? 0.0 : mean_reversion;
+    w.uses_psi = driven;
+    // weights of one element with its left edge first; split below
+    std::vector<double> f(elements * (m + 1) * w.count, 0.0), psi(driven ? f.size() : 0, 0.0);
+    detail::for_each_integral(
+        curve, maturities, basis,
+        [&](std::size_t row, bool on_psi, double from, double to, double level) {
+            for (std::size_t e = elements; e-- > 0 && from < meshes.edges[e + 1];) {
+                const double left = meshes.edges[e];
+                if (to <= left) continue;
+                const double size = level * left / (on_psi ? 1.0 : meshes.scales[e]);
+                detail::add_unit_piece(s, from / left,
+                                       to >= meshes.edges[e + 1] ? s.q : to / left, size,
+                                       (on_psi ? psi : f).data() + e * (m + 1) * w.count + row,
+                                       w.count);
+            }
         });
-        if (!driven && mean_reversion != 0.0)
-            for (std::size_t n = 0; n < per * nodes; ++n) psi[n] = mean_reversion * f[n];
+    auto split = [&](const std::vector<double>& from, std::vector<double>& nodes,
+                     std::vector<double>& left) {
+        const std::size_t block = (m + 1) * w.count;
+        for (std::size_t e = 0; e < elements; ++e) {
+            const auto at = from.begin() + static_cast<std::ptrdiff_t>(e * block);
+            const auto edge = at + static_cast<std::ptrdiff_t>(w.count);
+            left.insert(left.end(), at, edge);
+            nodes.insert(nodes.end(), edge, at + static_cast<std::ptrdiff_t>(block));
+        }
+    };
+    split(f, w.f, w.left_f);
+    if (driven) split(psi, w.psi, w.left_psi);
+    // A shared node is stored by the solver with the scale of the element to its left.
+    auto merge = [&](std::vector<double>& nodes, const std::vector<double>& left, double scale) {
+        for (std::size_t e = 0; e + 1 < elements; ++e)
+            for (std::size_t r = 0; r < w.count; ++r)
+                nodes[(e * m + m - 1) * w.count + r] += scale * left[(e + 1) * w.count + r];
+    };
+    merge(w.f, w.left_f, meshes.plan->step_scale);
+    if (driven) merge(w.psi, w.left_psi, 1.0);
+    const std::size_t per = basis ? curve.basis_size() : 1;
+    for (std::size_t e = 0, t = 0; e < meshes.most; ++e) {
+        while (t < maturities.size() && maturities[t] <= (e ? meshes.edges[e - 1] : 0.0)) ++t;
+        w.first_active.push_back(t * per);
     }
-    // A shared node serves two elements; F there is stored once, with the earlier element's scale.
-    for (std::size_t r = 0; r < rows.count; ++r)
-        for (std::size_t n = 0; n < nodes; ++n)
-            rows.f[r * nodes + n] /= mesh.scales[n ? (n - 1) / m : 0];
-    for (std::size_t k = 0; k < mesh.elements; ++k) {
-        std::size_t t = 0;
-        while (t < maturities.size() && maturities[t] <= mesh.edges[k]) ++t;
-        result.first_active.push_back(t * per);
-    }
-    return result;
+    return w;
+}
+
+// The first element of the mesh with `elements` elements.
+inline first_element_functional make_first_functional(const graded_meshes& meshes,
+                                                      const graded_functional& w,
+                                                      std::size_t elements,
+                                                      const variance_curve& curve,
+                                                      std::span<const double> maturities,
+                                                      bool basis) {
+    const std::size_t m = meshes.plan->shape->m, edge = meshes.most - elements;
+    const double b = meshes.edges[edge], scale = meshes.scales[edge];
+    first_element_functional first;
+    first.f.assign((m + 1) * w.count, 0.0);
+    if (w.uses_psi) first.psi.assign((m + 1) * w.count, 0.0);
+    detail::for_each_integral(
+        curve, maturities, basis,
+        [&](std::size_t row, bool on_psi, double from, double to, double level) {
+            if (from >= b) return;
+            double* to_row = (on_psi ? first.psi : first.f).data() + row;
+            const double size = level * b / (on_psi ? 1.0 : scale);
+            if (from == 0.0 && to >= b)
+                for (std::size_t j = 0; j <= m; ++j)
+                    to_row[j * w.count] += size * meshes.plan->first_total[j];
+            else
+                detail::add_first_piece(*meshes.plan, from / b, std::min(to / b, 1.0), size, to_row,
+                                        w.count);
+        });
+    if (elements > 1)  // element 1 of this mesh is element edge of the common ones
+        for (std::size_t r = 0; r < w.count; ++r) {
+            first.f[m * w.count + r] += w.left_f[edge * w.count + r];
+            if (w.uses_psi) first.psi[m * w.count + r] += w.left_psi[edge * w.count + r];
+        }
+    return first;
 }
 
 }  // namespace volterra

@@ -41,7 +41,7 @@ inline constexpr std::size_t vector_registers = 16;
 typedef double pack __attribute__((vector_size(sizeof(double) * pack_width)));
 
 VOLTERRA_INLINE pack sqrt(pack x) {
-    pack r;
+    pack r = x;
     for (std::size_t i = 0; i < pack_width; ++i) r[i] = __builtin_sqrt(x[i]);
     return r;
 }
