@@ -17,6 +17,12 @@
 
 namespace volterra {
 
+// One element's weights to itself and their Schur form; see graded_operator.
+struct graded_matrices {
+    const double *own, *q, *q_transposed, *s, *to_history;
+    bool paired;
+};
+
 // One block's work order. All rows are split: `lanes` real parts, then `lanes` imaginary parts.
 struct graded_block {
     const double* c0;  // 2 x lanes
@@ -27,10 +33,9 @@ struct graded_block {
     const double* scales;  // elements - 1: left^alpha of all but the first, which has scales[0]
     const double* powers;  // m: (node/b)^alpha on the first element
     // from graded_plan
-    const double *first, *own, *q, *q_transposed, *s, *to_history, *from_first, *lag,
-        *extrapolation, *tau_power, *series;
+    graded_matrices start, step;
+    const double *from_zero, *from_first, *lag, *extrapolation, *tau_power, *series;
     std::size_t lags;  // blocks in `lag`
-    bool paired;
     // linear functionals: value_r = sum_n f[n][r] (G + left^alpha mix psi)_n + p[n][r] psi_n
     std::size_t functionals;
     double mix;
@@ -56,6 +61,8 @@ inline constexpr std::size_t graded_workspace(std::size_t nodes, std::size_t ele
 }  // namespace volterra
 
 namespace volterra::VOLTERRA_TARGET {
+
+#define VOLTERRA_UNROLL _Pragma("GCC unroll 16")
 
 namespace graded_detail {
 
@@ -94,12 +101,19 @@ VOLTERRA_INLINE void multiply_tile(pack (&acc)[rows][row_packs], const double* w
                                    const double* in, std::size_t columns) {
     for (std::size_t j = 0; j < columns; ++j) {
         pack x[row_packs];
+        VOLTERRA_UNROLL
         for (std::size_t c = 0; c < row_packs; ++c) x[c] = load(in + j * row + c * pack_width);
+        VOLTERRA_UNROLL
         for (std::size_t i = 0; i < rows; ++i) {
             const pack a = broadcast(w[j * m + i]);
+            VOLTERRA_UNROLL
             for (std::size_t c = 0; c < row_packs; ++c) acc[i][c] += a * x[c];
         }
     }
+}
+
+VOLTERRA_INLINE void copy_rows(const double* from, std::size_t rows, double* to) {
+    for (std::size_t i = 0; i < rows * row; i += pack_width) store(to + i, load(from + i));
 }
 
 // Rows per register tile: accumulators, one row of input and one weight have to fit.
@@ -113,7 +127,9 @@ VOLTERRA_INLINE void multiply(const double* w, const double* in, std::size_t col
     for (std::size_t top = 0; top < m; top += rows) {
         pack acc[rows][row_packs] = {};
         multiply_tile<rows>(acc, w + top, m, in, columns);
+        VOLTERRA_UNROLL
         for (std::size_t i = 0; i < rows; ++i)
+            VOLTERRA_UNROLL
             for (std::size_t c = 0; c < row_packs; ++c)
                 store(out + (top + i) * row + c * pack_width, acc[i][c]);
     }
@@ -160,26 +176,34 @@ template <std::size_t m>
 inline pack newton_step(const double* w, const quadratic& f, const double* h, double* psi,
                         double damping) {
     complex_pack a[m][m], r[m];
+    VOLTERRA_UNROLL
     for (std::size_t j = 0; j < m; ++j) r[j] = load_complex(h + j * row) - load_complex(psi + j * row);
+    VOLTERRA_UNROLL
     for (std::size_t j = 0; j < m; ++j) {
         const complex_pack x = load_complex(psi + j * row), g = f.value(x), d = f.derivative(x);
+        VOLTERRA_UNROLL
         for (std::size_t i = 0; i < m; ++i) {
             const pack wij = broadcast(w[j * m + i]);
             r[i] = r[i] + wij * g;
             a[i][j] = {(i == j ? 1.0 : 0.0) - wij * d.re, -wij * d.im};
         }
     }
+    VOLTERRA_UNROLL
     for (std::size_t k = 0; k < m; ++k) {
         const complex_pack inverse = complex_pack{broadcast(1.0), broadcast(0.0)} / a[k][k];
         r[k] = r[k] * inverse;
+        VOLTERRA_UNROLL
         for (std::size_t j = k + 1; j < m; ++j) a[k][j] = a[k][j] * inverse;
+        VOLTERRA_UNROLL
         for (std::size_t i = k + 1; i < m; ++i) {
+            VOLTERRA_UNROLL
             for (std::size_t j = k + 1; j < m; ++j) a[i][j] = a[i][j] - a[i][k] * a[k][j];
             r[i] = r[i] - a[i][k] * r[k];
         }
     }
     pack size = broadcast(0.0);
     for (std::size_t k = m; k-- > 0;) {
+        VOLTERRA_UNROLL
         for (std::size_t j = k + 1; j < m; ++j) r[k] = r[k] - a[k][j] * r[j];
         size = larger(norm(r[k]), size);
         store_complex(psi + k * row, load_complex(psi + k * row) + broadcast(damping) * r[k]);
@@ -194,10 +218,12 @@ inline mask newton(const double* w, const quadratic& f, const double* h, double*
     const double goal = accuracy * accuracy, sharp = 1e-28;
     for (int step = 0; step < 40 && any(open); ++step) {
         complex_pack before[m];
+        VOLTERRA_UNROLL
         for (std::size_t j = 0; j < m; ++j) before[j] = load_complex(psi + j * row);
         // after 12 plain steps, half steps: they calm a cycle
         const pack size = newton_step<m>(w, f, h, psi, step < 12 ? 1.0 : 0.5);
         pack scale = broadcast(0.0);
+        VOLTERRA_UNROLL
         for (std::size_t j = 0; j < m; ++j) {
             const complex_pack x = select(open, load_complex(psi + j * row), before[j]);
             store_complex(psi + j * row, x);
@@ -210,6 +236,24 @@ inline mask newton(const double* w, const quadratic& f, const double* h, double*
     return open;
 }
 
+#ifdef GX_COUNT
+inline long gx_count[64], gx_blocks[64];inline size_t gx_k;
+#endif
+// Whether every node has the root that continues the one at the left edge. Given the other nodes,
+// psi_i solves a quadratic, and the root that tends to its history as the weight w = W_ii tends
+// to 0 is the one with Re(1 - w G') > 0. False for nan.
+template <std::size_t m>
+VOLTERRA_INLINE mask on_branch(const graded_matrices& w, const quadratic& f, const double* psi) {
+    pack worst = broadcast(0.0);
+    VOLTERRA_UNROLL
+    for (std::size_t j = 0; j < m; ++j) {
+        const pack slope = f.c1.re + 2.0 * f.c2 * load(psi + j * row);
+        const pack amount = broadcast(w.own[j * m + j]) * slope;
+        worst = amount <= worst ? worst : amount;
+    }
+    return worst < 0.9;
+}
+
 // The factors of (S - d)^-1 for one pack: per 2 x 2 block its inverse.
 template <std::size_t m>
 struct shifted_factors {
@@ -218,6 +262,7 @@ struct shifted_factors {
 
 template <std::size_t m>
 VOLTERRA_INLINE void factor(const double* s, complex_pack d, shifted_factors<m>& to) {
+    VOLTERRA_UNROLL
     for (std::size_t k = 0; k < m; k += 2) {
         const double s12 = s[k * m + k + 1], s21 = s[(k + 1) * m + k];
         const complex_pack p = {s[k * m + k] - d.re, -d.im};
@@ -236,6 +281,7 @@ template <std::size_t m>
 VOLTERRA_INLINE void solve_shifted(const double* s, const shifted_factors<m>& f, complex_pack (&y)[m]) {
     for (std::size_t k = m; k >= 2; k -= 2) {
         complex_pack &one = y[k - 2], &two = y[k - 1];
+        VOLTERRA_UNROLL
         for (std::size_t j = k; j < m; ++j) {
             one = one - broadcast(s[(k - 2) * m + j]) * y[j];
             two = two - broadcast(s[(k - 1) * m + j]) * y[j];
@@ -259,13 +305,17 @@ VOLTERRA_INLINE void accumulate_functionals(const graded_block& b, std::size_t k
     std::size_t r = k ? b.first_active[k] : 0;
     auto rows = [&]<std::size_t n>() {
         pack acc[n][row_packs];
+        VOLTERRA_UNROLL
         for (std::size_t i = 0; i < n; ++i)
+            VOLTERRA_UNROLL
             for (std::size_t c = 0; c < row_packs; ++c)
                 acc[i][c] = load(b.values + (r + i) * row + c * pack_width);
         multiply_tile<n>(acc, weights_f + r, b.functionals, g, m);
         if (weights_psi)
             multiply_tile<n>(acc, weights_psi + r, b.functionals, psi, m);
+        VOLTERRA_UNROLL
         for (std::size_t i = 0; i < n; ++i)
+            VOLTERRA_UNROLL
             for (std::size_t c = 0; c < row_packs; ++c)
                 store(b.values + (r + i) * row + c * pack_width, acc[i][c]);
     };
@@ -273,9 +323,93 @@ VOLTERRA_INLINE void accumulate_functionals(const graded_block& b, std::size_t k
     for (; r < b.functionals; ++r) rows.template operator()<1>();
 }
 
+// Solves psi = h + W G(psi) on one element from the guess in `psi`; `h` holds Q^T W^-1 h, `left` the
+// value at the left edge. The work rows y, z and `r` are overwritten. Returns through `open` the lanes that did not converge.
+template <std::size_t m>
+VOLTERRA_INLINE void solve_element(const graded_matrices& w, const quadratic (&f)[packs],
+                                   const double* h, const double* left, double* psi, double* r, double* y,
+                                   double* z, double accuracy, mask (&open)[packs]) {
+    pack last[packs];
+    complex_pack d[packs];
+    shifted_factors<m> factors[packs];
+    VOLTERRA_UNROLL
+    for (std::size_t p = 0; p < packs; ++p) {
+        open[p] = f[p].c2 == f[p].c2;
+        last[p] = broadcast(0.0);
+        d[p] = f[p].derivative(load_complex(psi + (m / 2) * row + p * pack_width));
+        factor<m>(w.s, d[p], factors[p]);
+    }
+    bool working = w.paired;
 #ifdef GX_COUNT
-inline long gx_count[64], gx_blocks[64];
+    gx_blocks[gx_k]++;
 #endif
+    for (int step = 0; step < 12 && working; ++step) {
+#ifdef GX_COUNT
+    gx_count[gx_k]++;
+#endif
+        VOLTERRA_UNROLL
+        for (std::size_t j = 0; j < m; ++j)
+            VOLTERRA_UNROLL
+            for (std::size_t p = 0; p < packs; ++p) {
+                const complex_pack x = load_complex(psi + j * row + p * pack_width);
+                store_complex(r + j * row + p * pack_width,
+                              f[p].c0 + (f[p].c1 - d[p] + f[p].c2 * x) * x);
+            }
+        multiply<m>(w.q_transposed, r, m, y);
+        VOLTERRA_UNROLL
+        for (std::size_t p = 0; p < packs; ++p) {
+            complex_pack x[m];
+            const std::size_t c = p * pack_width;
+            VOLTERRA_UNROLL
+            for (std::size_t j = 0; j < m; ++j)
+                x[j] = load_complex(y + j * row + c) + load_complex(h + j * row + c);
+            solve_shifted<m>(w.s, factors[p], x);
+            VOLTERRA_UNROLL
+            for (std::size_t j = 0; j < m; ++j) store_complex(y + j * row + c, x[j]);
+        }
+        multiply<m>(w.q, y, m, z);
+        working = false;
+        VOLTERRA_UNROLL
+        for (std::size_t p = 0; p < packs; ++p) {
+            const std::size_t c = p * pack_width;
+            pack size = broadcast(0.0), height = broadcast(0.0);
+            VOLTERRA_UNROLL
+            for (std::size_t j = 0; j < m; ++j) {
+                const complex_pack x = load_complex(z + j * row + c);
+                const complex_pack old = load_complex(psi + j * row + c);
+                size = larger(size, norm(x - old));
+                height = larger(height, norm(x));
+                store_complex(psi + j * row + c, select(open[p], x, old));
+            }
+            // What is left is the last step times theta/(1 - theta), theta the observed
+            // contraction, 0.3 before one has been seen.
+            const pack theta2 = step ? size / last[p] : broadcast(0.09);
+            const pack goal = height * (accuracy * accuracy);
+            last[p] = size;
+            open[p] = open[p] & ~((size * theta2 <= 0.25 * goal) & (theta2 < 0.25));
+            open[p] = open[p] & ~(size <= 1e-30 * height);
+            working |= any(open[p]);
+        }
+    }
+    bool suspicious = false;
+    for (std::size_t p = 0; p < packs; ++p) {
+        open[p] = open[p] | ~on_branch<m>(w, f[p], psi + p * pack_width);
+        suspicious |= any(open[p]);
+    }
+    if (!suspicious) return;
+    multiply<m>(w.to_history, h, m, y);
+    for (std::size_t p = 0; p < packs; ++p) {
+        const std::size_t c = p * pack_width;
+        VOLTERRA_UNROLL
+        for (std::size_t j = 0; j < m; ++j)
+            store_complex(psi + j * row + c, select(open[p], load_complex(left + c),
+                                                    load_complex(psi + j * row + c)));
+        const mask again = open[p];
+        open[p] = newton<m>(w.own, f[p], y + c, psi + c, open[p], accuracy);
+        open[p] = open[p] | (again & ~on_branch<m>(w, f[p], psi + c));
+    }
+}
+
 template <std::size_t m>
 inline void solve(const graded_block& b) {
     double* const G = b.workspace;                          // 1 + elements m rows
@@ -283,7 +417,7 @@ inline void solve(const graded_block& b) {
     double* const y = h + m * row;                          // m rows
     double* const psi_edge = y + m * row;                   // m + 1 rows: left edge, then nodes
     double* const psi = psi_edge + row;
-    double* const mixed = psi_edge + (m + 1) * row;         // m rows
+    double* const z = psi_edge + (m + 1) * row;             // m rows
 
     std::memset(b.values, 0, b.functionals * row * sizeof(double));
     std::memset(b.status, 0, lanes * sizeof(double));
@@ -296,121 +430,63 @@ inline void solve(const graded_block& b) {
     }
 
     for (std::size_t k = 0; k < b.elements; ++k) {
+#ifdef GX_COUNT
+        gx_k=k;
+#endif
         double* const g = G + (1 + k * m) * row;  // this element's nodes
         const double scale = b.scales[k ? k - 1 : 0];
-        auto fail = [&](mask open, std::size_t c) {
-            for (std::size_t i = 0; i < pack_width; ++i)
-                if (open[i] && b.status[c + i] == 0.0) b.status[c + i] = static_cast<double>(k + 1);
-        };
-        if (k == 0) {
-            multiply<m>(b.first, G, 1, h);
-            for (std::size_t c = 0; c < lanes; c += pack_width) {
-                const quadratic f = scaled(b, c, scale);
-                const global_guess guess = make_guess(scaled(b, c, 1.0), b.series);
-                for (std::size_t j = 0; j < m; ++j)
-                    store_complex(psi + j * row + c, guess.at(scale * b.powers[j]));
-                fail(newton<m>(b.first + m, f, h + c, psi + c, f.c2 == f.c2, b.accuracy), c);
-            }
-        } else {
-            constexpr std::size_t rows = tile_rows<m>;
-            for (std::size_t top = 0; top < m; top += rows) {
-                pack acc[rows][row_packs] = {};
+        constexpr std::size_t rows = tile_rows<m>;
+        for (std::size_t top = 0; top < m; top += rows) {
+            pack acc[rows][row_packs] = {};
+            if (k == 0) {
+                multiply_tile<rows>(acc, b.from_zero + top, m, G, 1);
+            } else {
                 multiply_tile<rows>(acc, b.from_first + (k - 1) * m * (m + 1) + top, m, G, m + 1);
                 multiply_tile<rows>(acc, b.lag + (b.lags + 1 - k) * m * m + top, m,
                                     G + (1 + m) * row, (k - 1) * m);
-                for (std::size_t i = 0; i < rows; ++i)
-                    for (std::size_t c = 0; c < row_packs; ++c)
-                        store(h + (top + i) * row + c * pack_width, acc[i][c]);
             }
-            quadratic f[packs];
-            for (std::size_t p = 0; p < packs; ++p) f[p] = scaled(b, p * pack_width, scale);
-            if (k == 1) {
-                std::memcpy(psi_edge, psi + (m - 1) * row, row * sizeof(double));
-                for (std::size_t p = 0; p < packs; ++p) {
-                    const std::size_t c = p * pack_width;
-                    const global_guess guess = make_guess(scaled(b, c, 1.0), b.series);
-                    for (std::size_t j = 0; j < m; ++j)
-                        store_complex(psi + j * row + c, guess.at(scale * b.tau_power[j]));
-                }
-            } else {
-                multiply<m>(b.extrapolation, psi_edge, m + 1, y);
-                std::memcpy(psi_edge, psi + (m - 1) * row, row * sizeof(double));
-                std::memcpy(psi, y, m * row * sizeof(double));
-            }
-            mask open[packs];
-            pack last[packs];
-            complex_pack d[packs];
-            shifted_factors<m> factors[packs];
+            VOLTERRA_UNROLL
+            for (std::size_t i = 0; i < rows; ++i)
+                VOLTERRA_UNROLL
+                for (std::size_t c = 0; c < row_packs; ++c)
+                    store(h + (top + i) * row + c * pack_width, acc[i][c]);
+        }
+        quadratic f[packs];
+        VOLTERRA_UNROLL
+        for (std::size_t p = 0; p < packs; ++p) f[p] = scaled(b, p * pack_width, scale);
+        if (k >= 2) {
+            multiply<m>(b.extrapolation, psi_edge, m + 1, y);
+            copy_rows(psi + (m - 1) * row, 1, psi_edge);
+            copy_rows(y, m, psi);
+        } else {
+            if (k == 1) copy_rows(psi + (m - 1) * row, 1, psi_edge);
+            const double* const powers = k ? b.tau_power : b.powers;
+            VOLTERRA_UNROLL
             for (std::size_t p = 0; p < packs; ++p) {
-                open[p] = f[p].c2 == f[p].c2;
-                last[p] = broadcast(0.0);
-                d[p] = f[p].derivative(load_complex(psi + (m / 2) * row + p * pack_width));
-                factor<m>(b.s, d[p], factors[p]);
-            }
-            bool working = b.paired;
-#ifdef GX_COUNT
-            gx_blocks[k]++;
-#endif
-            for (int step = 0; step < 12 && working; ++step) {
+                const global_guess guess = make_guess(scaled(b, p * pack_width, 1.0), b.series);
+                VOLTERRA_UNROLL
                 for (std::size_t j = 0; j < m; ++j)
-                    for (std::size_t p = 0; p < packs; ++p) {
-                        const complex_pack x = load_complex(psi + j * row + p * pack_width);
-                        store_complex(g + j * row + p * pack_width,
-                                      f[p].c0 + (f[p].c1 - d[p] + f[p].c2 * x) * x);
-                    }
-                multiply<m>(b.q_transposed, g, m, y);
-                for (std::size_t p = 0; p < packs; ++p) {
-                    complex_pack z[m];
-                    const std::size_t c = p * pack_width;
-                    for (std::size_t j = 0; j < m; ++j)
-                        z[j] = load_complex(y + j * row + c) + load_complex(h + j * row + c);
-                    solve_shifted<m>(b.s, factors[p], z);
-                    for (std::size_t j = 0; j < m; ++j) store_complex(y + j * row + c, z[j]);
-                }
-                multiply<m>(b.q, y, m, mixed);
-                working = false;
-#ifdef GX_COUNT
-                gx_count[k]++;
-#endif
-                for (std::size_t p = 0; p < packs; ++p) {
-                    const std::size_t c = p * pack_width;
-                    pack size = broadcast(0.0), height = broadcast(0.0);
-                    for (std::size_t j = 0; j < m; ++j) {
-                        const complex_pack x = load_complex(mixed + j * row + c);
-                        const complex_pack old = load_complex(psi + j * row + c);
-                        size = larger(size, norm(x - old));
-                        height = larger(height, norm(x));
-                        store_complex(psi + j * row + c, select(open[p], x, old));
-                    }
-                    // What is left is the last step times theta/(1 - theta), theta the observed
-                    // contraction, 0.3 before one has been seen.
-                    const pack theta2 = step ? size / last[p] : broadcast(0.09);
-                    const pack goal = height * (b.accuracy * b.accuracy);
-                    last[p] = size;
-                    open[p] = open[p] & ~((size * theta2 <= 0.25 * goal) & (theta2 < 0.25));
-                    open[p] = open[p] & ~(size <= 1e-30 * height);
-                    working |= any(open[p]);
-                }
-            }
-            if (working || !b.paired) {
-                multiply<m>(b.to_history, h, m, y);
-                for (std::size_t p = 0; p < packs; ++p) {
-                    const std::size_t c = p * pack_width;
-                    open[p] = newton<m>(b.own, f[p], y + c, psi + c, open[p], b.accuracy);
-                    fail(open[p], c);
-                }
+                    store_complex(psi + j * row + p * pack_width, guess.at(scale * powers[j]));
             }
         }
-        for (std::size_t c = 0; c < lanes; c += pack_width) {
-            const quadratic f = scaled(b, c, scale);
-            for (std::size_t j = 0; j < m; ++j) {
-                const complex_pack x = load_complex(psi + j * row + c);
-                store_complex(g + j * row + c, f.value(x));
-                store_complex(mixed + j * row + c, f.value(x) + broadcast(scale * b.mix) * x);
+        mask open[packs];
+        solve_element<m>(k ? b.step : b.start, f, h, psi_edge, psi, g, y, z, b.accuracy, open);
+        VOLTERRA_UNROLL
+        for (std::size_t p = 0; p < packs; ++p)
+            for (std::size_t i = 0; i < pack_width; ++i)
+                if (open[p][i] && b.status[p * pack_width + i] == 0.0)
+                    b.status[p * pack_width + i] = static_cast<double>(k + 1);
+        VOLTERRA_UNROLL
+        for (std::size_t j = 0; j < m; ++j)
+            VOLTERRA_UNROLL
+            for (std::size_t p = 0; p < packs; ++p) {
+                const std::size_t at = j * row + p * pack_width;
+                const complex_pack x = load_complex(psi + at), value = f[p].value(x);
+                store_complex(g + at, value);
+                if (b.mix != 0.0) store_complex(z + at, value + broadcast(scale * b.mix) * x);
             }
-        }
-        if (b.psi) std::memcpy(b.psi + (1 + k * m) * row, psi, m * row * sizeof(double));
-        accumulate_functionals<m>(b, k, b.mix != 0.0 ? mixed : g, psi);
+        if (b.psi) copy_rows(psi, m, b.psi + (1 + k * m) * row);
+        accumulate_functionals<m>(b, k, b.mix != 0.0 ? z : g, psi);
     }
 }
 

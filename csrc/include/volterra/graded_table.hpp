@@ -68,6 +68,16 @@ inline const graded_table& table_of(std::size_t nodes, double ratio) {
     return *entry;
 }
 
+// One element's weights to itself, W, and the real Schur form W^-1 = Q S Q^T. Column-major but for s.
+struct graded_operator {
+    std::vector<double> own;             // W
+    std::vector<double> q, q_transposed;
+    std::vector<double> s;               // row-major
+    std::vector<double> to_history;      // W Q: from Q^T W^-1 h, which the solver keeps, to h
+    std::vector<double> history;         // Q^T W^-1, for the maker of a plan
+    bool paired;                         // S is in aligned 2 x 2 blocks: the fast iteration works
+};
+
 // What the solver needs to know about one hurst index and one kind of mesh. Immutable once made:
 // one plan may be used by any number of threads, for any lanes, parameters and curves.
 struct graded_plan {
@@ -76,19 +86,68 @@ struct graded_plan {
     std::size_t elements;  // the most a mesh may have, the first one included
     double step_scale;     // q^alpha
     // Column-major blocks (one column per source node).
-    std::vector<double> first;           // m x (m+1): first element to itself
-    std::vector<double> own;             // m x m: W
-    std::vector<double> q, q_transposed; // columns of Q, of Q^T: W^-1 = Q S Q^T
-    std::vector<double> s;               // m x m, row-major
-    std::vector<double> to_history;      // columns of W Q: from the solver's h to K * G
+    std::vector<double> from_zero;       // m: Q^T W^-1 times the weights of t = 0 in the first element
+    graded_operator start, step;         // of the first element and of all others
     std::vector<double> from_first;      // per distance k = 1 ..: Q^T W^-1 times the block
     std::vector<double> lag;             // per distance from elements - 2 down to 1, likewise
     std::vector<double> extrapolation;   // m x (m+1): previous element's psi to this one's
     std::vector<double> tau_power;       // m: (node / left edge)^alpha
     std::vector<double> first_total;     // m + 1: int_0^1 P_j(s^alpha) ds
     double series[3];                    // Gamma(1 + k alpha)/Gamma(1 + (k+1) alpha), k = 0, 1, 2
-    bool paired;                         // S is in aligned 2 x 2 blocks: the fast iteration works
 };
+
+namespace detail {
+
+// to = l r, l and `to` column-major m x m and m x width, r row-major with rows `stride` apart.
+inline void product(const double* l, const double* r, std::size_t m, std::size_t width,
+                    std::size_t stride, double factor, double* to) {
+    for (std::size_t j = 0; j < width; ++j) {
+        for (std::size_t i = 0; i < m; ++i) to[j * m + i] = 0.0;
+        for (std::size_t k = 0; k < m; ++k) {
+            const double g = factor * r[k * stride + j];
+            for (std::size_t i = 0; i < m; ++i) to[j * m + i] += l[k * m + i] * g;
+        }
+    }
+}
+
+inline void transpose(const double* from, std::size_t rows, std::size_t columns,
+                      std::size_t stride, double* to) {
+    for (std::size_t i = 0; i < rows; ++i)
+        for (std::size_t j = 0; j < columns; ++j) to[j * rows + i] = from[i * stride + j];
+}
+
+// `own` is row-major, its rows `stride` apart.
+inline graded_operator make_operator(const double* own, std::size_t m, std::size_t stride) {
+    graded_operator op;
+    for (auto* matrix : {&op.own, &op.q, &op.q_transposed, &op.to_history, &op.history})
+        matrix->resize(m * m);
+    transpose(own, m, m, stride, op.own.data());
+    // inverse of W by elimination; W is well conditioned (below 100) and needs no pivoting
+    std::vector<double> a(m * m), inverse(m * m, 0.0);
+    for (std::size_t i = 0; i < m; ++i) {
+        for (std::size_t j = 0; j < m; ++j) a[i * m + j] = own[i * stride + j];
+        inverse[i * m + i] = 1.0;
+    }
+    for (std::size_t k = 0; k < m; ++k) {
+        const double pivot = 1.0 / a[k * m + k];
+        for (std::size_t j = 0; j < m; ++j) a[k * m + j] *= pivot, inverse[k * m + j] *= pivot;
+        for (std::size_t i = 0; i < m; ++i) {
+            if (i == k) continue;
+            const double f = a[i * m + k];
+            for (std::size_t j = 0; j < m; ++j)
+                a[i * m + j] -= f * a[k * m + j], inverse[i * m + j] -= f * inverse[k * m + j];
+        }
+    }
+    op.s = inverse;
+    op.paired = real_schur(op.s.data(), op.q_transposed.data(), m);  // row-major Q
+    align_schur(op.s.data(), op.q_transposed.data(), m);
+    for (std::size_t i = 2; i < m; i += 2) op.paired &= op.s[i * m + i - 1] == 0.0;
+    transpose(op.q_transposed.data(), m, m, m, op.q.data());
+    product(op.q_transposed.data(), inverse.data(), m, m, m, 1.0, op.history.data());
+    product(op.own.data(), op.q_transposed.data(), m, m, m, 1.0, op.to_history.data());
+    return op;
+}
+}  // namespace detail
 
 inline graded_plan make_graded_plan(double alpha, const graded_table& table, std::size_t elements) {
     const graded_shape& shape = *table.shape;
@@ -109,46 +168,10 @@ inline graded_plan make_graded_plan(double alpha, const graded_table& table, std
     }
     const double* first = values.data();
     const double* own = first + m * n1;
-    auto columns = [](const double* block, std::size_t rows, std::size_t width, double* to) {
-        for (std::size_t i = 0; i < rows; ++i)
-            for (std::size_t j = 0; j < width; ++j) to[j * rows + i] = block[i * width + j];
-    };
-    plan.first.resize(m * n1);
-    columns(first, m, n1, plan.first.data());
-    plan.own.resize(m * m);
-    columns(own, m, m, plan.own.data());
-
-    // inverse of W by elimination; W is well conditioned (below 100) and needs no pivoting
-    std::vector<double> a(own, own + m * m), inverse(m * m, 0.0);
-    for (std::size_t i = 0; i < m; ++i) inverse[i * n1] = 1.0;
-    for (std::size_t k = 0; k < m; ++k) {
-        const double pivot = 1.0 / a[k * n1];
-        for (std::size_t j = 0; j < m; ++j) a[k * m + j] *= pivot, inverse[k * m + j] *= pivot;
-        for (std::size_t i = 0; i < m; ++i) {
-            if (i == k) continue;
-            const double f = a[i * m + k];
-            for (std::size_t j = 0; j < m; ++j)
-                a[i * m + j] -= f * a[k * m + j], inverse[i * m + j] -= f * inverse[k * m + j];
-        }
-    }
-    plan.s = inverse, plan.q.resize(m * m);
-    plan.paired = real_schur(plan.s.data(), plan.q.data(), m);
-    for (std::size_t i = 2; i < m; i += 2) plan.paired &= plan.s[i * m + i - 1] == 0.0;
-    plan.q_transposed = plan.q;  // row-major Q is column-major Q^T
-    columns(plan.q_transposed.data(), m, m, plan.q.data());
-
-    // z = Q^T W^-1, then z times every block, scaled back; left factors and results column-major
-    auto product = [&](const double* l, const double* r, std::size_t width, double f, double* to) {
-        for (std::size_t j = 0; j < width; ++j)
-            for (std::size_t i = 0; i < m; ++i) to[j * m + i] = 0.0;
-        for (std::size_t j = 0; j < width; ++j)
-            for (std::size_t k = 0; k < m; ++k) {
-                const double g = f * r[k * width + j];
-                for (std::size_t i = 0; i < m; ++i) to[j * m + i] += l[k * m + i] * g;
-            }
-    };
-    std::vector<double> z(m * m);
-    product(plan.q_transposed.data(), inverse.data(), m, 1.0, z.data());
+    plan.start = detail::make_operator(first + 1, m, n1);
+    plan.step = detail::make_operator(own, m, m);
+    plan.from_zero.resize(m);
+    detail::product(plan.start.history.data(), first, m, 1, n1, 1.0, plan.from_zero.data());
     plan.from_first.resize((elements - 1) * m * n1);
     const std::size_t lags = elements > 2 ? elements - 2 : 0;
     plan.lag.resize(lags * m * m);
@@ -156,19 +179,16 @@ inline graded_plan make_graded_plan(double alpha, const graded_table& table, std
     const double decay = plan.step_scale / shape.q;
     double scale = decay;
     for (std::size_t k = 1; k < elements; ++k, scale *= decay) {
-        product(z.data(), block, n1, scale, &plan.from_first[(k - 1) * m * n1]);
+        detail::product(plan.step.history.data(), block, m, n1, n1, scale,
+                        &plan.from_first[(k - 1) * m * n1]);
         block += m * n1;
-        if (k <= lags) product(z.data(), block, m, scale, &plan.lag[(lags - k) * m * m]);
+        if (k <= lags)
+            detail::product(plan.step.history.data(), block, m, m, m, scale,
+                            &plan.lag[(lags - k) * m * m]);
         block += m * m;
     }
-    // W Q, column-major: sum_k W[i][k] Q[k][j]
-    plan.to_history.assign(m * m, 0.0);
-    for (std::size_t i = 0; i < m; ++i)
-        for (std::size_t k = 0; k < m; ++k)
-            for (std::size_t j = 0; j < m; ++j)
-                plan.to_history[j * m + i] += own[i * m + k] * plan.q[j * m + k];
     plan.extrapolation.resize(m * n1);
-    columns(shape.extrapolation.data(), m, n1, plan.extrapolation.data());
+    detail::transpose(shape.extrapolation.data(), m, n1, n1, plan.extrapolation.data());
     for (std::size_t i = 1; i <= m; ++i)
         plan.tau_power.push_back(std::exp(alpha * shape.log_q * shape.x[i]));
     // int_0^1 P*_p(s^alpha) ds = (1/alpha) int_0^1 z^(1/alpha - 1) P*_p(z) dz

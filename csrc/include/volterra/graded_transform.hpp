@@ -11,6 +11,7 @@
 #include <cmath>
 #include <complex>
 #include <cstddef>
+#include <cstdint>
 #include <limits>
 #include <span>
 #include <vector>
@@ -23,15 +24,33 @@ namespace volterra {
 
 namespace detail {
 
+// Doubles on a cache-line boundary: a 64-byte load that straddles two lines costs twice.
+class aligned_buffer {
+public:
+    explicit aligned_buffer(std::size_t size) : storage_(size + 8, 0.0) {
+        const auto address = reinterpret_cast<std::uintptr_t>(storage_.data());
+        offset_ = (64 - address % 64) % 64 / sizeof(double);
+    }
+    double* data() { return storage_.data() + offset_; }
+    double& operator[](std::size_t i) { return data()[i]; }
+
+private:
+    std::vector<double> storage_;
+    std::size_t offset_;
+};
+
 inline graded_block work_order(const graded_plan& plan) {
     graded_block b{};
     b.nodes = plan.shape->m, b.powers = plan.shape->x.data() + 1;
-    b.first = plan.first.data(), b.own = plan.own.data();
-    b.q = plan.q.data(), b.q_transposed = plan.q_transposed.data(), b.s = plan.s.data();
-    b.to_history = plan.to_history.data(), b.from_first = plan.from_first.data();
+    auto matrices = [](const graded_operator& op) {
+        return graded_matrices{op.own.data(), op.q.data(), op.q_transposed.data(), op.s.data(),
+                               op.to_history.data(), op.paired};
+    };
+    b.start = matrices(plan.start), b.step = matrices(plan.step);
+    b.from_zero = plan.from_zero.data(), b.from_first = plan.from_first.data();
     b.lag = plan.lag.data(), b.lags = plan.elements > 2 ? plan.elements - 2 : 0;
     b.extrapolation = plan.extrapolation.data(), b.tau_power = plan.tau_power.data();
-    b.series = plan.series, b.paired = plan.paired;
+    b.series = plan.series;
     return b;
 }
 
@@ -50,54 +69,193 @@ inline void set_mesh(graded_block& b, const graded_meshes& meshes, std::size_t e
 
 }  // namespace detail
 
-// One solve at one level of accuracy. values[r * u.size() + i]: functional r (maturity, or maturity
-// and elementary curve when `basis`) at u[i]; solved[i] is false where the solver failed.
+// One solve at one level of accuracy of the u numbered in `which`. values[r * u.size() + i]:
+// functional r (maturity, or maturity and elementary curve when `basis`) at u[i]; solved[i] is
+// false where the solver failed. Maturities must ascend.
 inline void graded_pass(const target_kernels& kernels, const graded_level& level,
                         const model_parameters& m, const variance_curve& curve,
-                        std::span<const std::complex<double>> u, std::span<const double> maturities,
+                        std::span<const std::complex<double>> u,
+                        std::span<const std::size_t> which, std::span<const double> maturities,
                         bool basis, std::span<std::complex<double>> values,
                         std::span<char> solved) {
-    const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes;
+    const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes, n = which.size();
     const double horizon = maturities.back();
-    std::vector<std::size_t> elements(u.size()), count(graded_most_elements + 2, 0), order(u.size());
-    for (std::size_t i = 0; i < u.size(); ++i) {
-        elements[i] = graded_elements(level, m, u[i], horizon);
+    std::vector<riccati_coefficients> c(n);
+    std::vector<std::size_t> elements(n), count(graded_most_elements + 2, 0), order(n);
+    for (std::size_t i = 0; i < n; ++i) {
+        c[i] = riccati(m, u[which[i]]);
+        elements[i] = graded_elements(level, m.alpha(), c[i], horizon);
         ++count[elements[i] + 1];
     }
     std::size_t most = graded_most_elements;
     while (most > 1 && count[most + 1] == 0) --most;
     for (std::size_t k = 1; k < count.size(); ++k) count[k] += count[k - 1];
-    for (std::size_t i = 0; i < u.size(); ++i) order[count[elements[i]]++] = i;  // stable
+    for (std::size_t i = 0; i < n; ++i) order[count[elements[i]]++] = i;  // stable
 
     const auto plan = make_graded_plan(m.alpha(), table_of(level.nodes, level.ratio), most);
     const graded_meshes meshes(plan, horizon, most);
     const auto functional = make_functional(meshes, curve, m.mean_reversion, maturities, basis);
-    std::vector<double> c0(row), c1(row), status(lanes), block_values(functional.count * row);
-    std::vector<double> workspace(graded_workspace(level.nodes, most, lanes));
+    detail::aligned_buffer c0(row), c1(row), status(lanes), block_values(functional.count * row);
+    detail::aligned_buffer workspace(graded_workspace(level.nodes, most, lanes));
     auto block = detail::work_order(plan);
     block.c0 = c0.data(), block.c1 = c1.data(), block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
     block.accuracy = level.accuracy;
     block.values = block_values.data(), block.status = status.data();
     block.workspace = workspace.data();
-    for (std::size_t start = 0; start < u.size();) {
+    for (std::size_t start = 0; start < n;) {
         const std::size_t k = elements[order[start]], end = count[k];
         const auto first = make_first_functional(meshes, functional, k, curve, maturities, basis);
         detail::set_mesh(block, meshes, k, functional, first);
         for (; start < end; start += lanes) {
             const std::size_t filled = std::min(lanes, end - start);
-            for (std::size_t i = 0; i < lanes; ++i) {  // idle lanes solve u = 0: psi = 0
-                const auto c = riccati(m, i < filled ? u[order[start + i]] : 0.0);
-                c0[i] = c.c0.real(), c0[lanes + i] = c.c0.imag();
-                c1[i] = c.c1.real(), c1[lanes + i] = c.c1.imag();
+            for (std::size_t i = 0; i < lanes; ++i) {  // idle lanes repeat the last one
+                const auto& from = c[order[start + std::min(i, filled - 1)]];
+                c0[i] = from.c0.real(), c0[lanes + i] = from.c0.imag();
+                c1[i] = from.c1.real(), c1[lanes + i] = from.c1.imag();
             }
             kernels.solve_graded_block(block);
-            for (std::size_t i = 0; i < filled; ++i) solved[order[start + i]] = status[i] == 0.0;
-            for (std::size_t r = 0; r < functional.count; ++r)
-                for (std::size_t i = 0; i < filled; ++i)
-                    values[r * u.size() + order[start + i]] = {block_values[r * row + i],
-                                                               block_values[r * row + lanes + i]};
+            for (std::size_t i = 0; i < filled; ++i) {
+                const std::size_t at = which[order[start + i]];
+                bool good = status[i] == 0.0;
+                for (std::size_t r = 0; r < functional.count; ++r) {
+                    const double re = block_values[r * row + i];
+                    const double im = block_values[r * row + lanes + i];
+                    values[r * u.size() + at] = {re, im};
+                    good = good && re - re == 0.0 && im - im == 0.0;
+                }
+                solved[at] = good;
+            }
         }
         start = end;
+    }
+}
+
+namespace detail {
+
+// int_0^T g0, the scale of rounding errors: an upper bound of int xi when curve and mean reversion
+// are not negative.
+inline double integrated_curve(const variance_curve& curve, double alpha, double maturity) {
+    const bool driven = curve.form == curve_form::driven;
+    double sum = driven ? curve.initial * maturity : 0.0;
+    for_each_reversed_piece(curve, maturity, [&](std::size_t k, double from, double to) {
+        const double level = std::abs(curve.levels[k]);
+        sum += driven ? level * (std::pow(to, alpha + 1) - std::pow(from, alpha + 1)) /
+                            std::tgamma(alpha + 2)
+                      : level * (to - from);
+    });
+    return sum;
+}
+
+// What |phi| max(1, |log phi|) will be at its largest maturity, roughly: psi from a rational function
+// of t^alpha with the right start and limit, log phi = (int g0) psi / t^alpha. Only chooses the level
+// a u starts from; graded_log_transform checks the outcome.
+inline double expected_size(const riccati_coefficients& c, double alpha,
+                            std::span<const double> maturities,
+                            std::span<const double> integrals) {
+    const std::complex<double> root = std::sqrt(c.c1 * c.c1 - 4.0 * c.c0 * c.c2);
+    const std::complex<double> limit = root - c.c1;  // psi(inf) = 2 c0 / limit
+    double largest = 0.0;
+    for (std::size_t t = 0; t < maturities.size(); ++t) {
+        const double z = std::pow(maturities[t], alpha);
+        const double decay = -(integrals[t] * c.c0 / (1.0 + 0.5 * z * limit)).real();
+        largest = std::max(largest, std::exp(-0.7 * decay));
+    }
+    return std::min(largest, 1.0);
+}
+
+}  // namespace detail
+
+// log E[exp(iuX_T)] by the graded scheme, maturities x u, and the absolute error of phi for every
+// value when `errors` is not empty (its size is that of `values`; inf where no level converged).
+// `bounds` (maturities x u) is the error asked for. Maturities must ascend.
+//
+// Each u is solved at the level its bound needs, coarser where |phi| is small at every maturity. With
+// errors it is solved a second time two levels finer, and again until the difference is below
+// the bound. Without, the level is trusted (see mesh.hpp for how often it errs).
+inline void solve_log_transform(const target_kernels& kernels, const model_parameters& m,
+                                const variance_curve& curve,
+                                std::span<const std::complex<double>> u,
+                                std::span<const double> maturities, std::span<const double> bounds,
+                                std::span<std::complex<double>> values, std::span<double> errors) {
+    const std::size_t n = u.size();
+    const double infinity = std::numeric_limits<double>::infinity();
+    std::vector<double> integrals;
+    for (double t : maturities) integrals.push_back(detail::integrated_curve(curve, m.alpha(), t));
+    auto size_of = [](std::complex<double> log_phi) {
+        return std::exp(log_phi.real()) * std::max(1.0, std::abs(log_phi));
+    };
+    auto needed = [&](std::size_t i) {  // the level that bounds ask for, given values
+        double error = 1.0;
+        for (std::size_t t = 0; t < maturities.size(); ++t)
+            error = std::min(error, bounds[t * n + i] / size_of(values[t * n + i]));
+        return graded_level_for(error);
+    };
+
+    std::vector<std::size_t> level(n), which;
+    std::vector<char> solved(n, 0), open(n, 1);
+    for (std::size_t i = 0; i < n; ++i) {
+        double bound = infinity;
+        for (std::size_t t = 0; t < maturities.size(); ++t) bound = std::min(bound, bounds[t * n + i]);
+        const double size = detail::expected_size(riccati(m, u[i]), m.alpha(), maturities, integrals);
+        level[i] = graded_level_for(std::min(bound / size, 0.1));
+    }
+    auto pass = [&](std::span<std::complex<double>> into) {
+        for (std::size_t l = 0; l < graded_levels; ++l) {
+            which.clear();
+            for (std::size_t i = 0; i < n; ++i)
+                if (open[i] && level[i] == l) which.push_back(i);
+            if (!which.empty())
+                graded_pass(kernels, graded_ladder(m.hurst, l), m, curve, u, which, maturities,
+                            false, into, solved);
+        }
+    };
+    for (bool again = true; again;) {
+        pass(values);
+        again = false;
+        for (std::size_t i = 0; i < n; ++i) {
+            if (!open[i]) continue;
+            const std::size_t want = solved[i] ? needed(i) : level[i] + 2;
+            open[i] = want > level[i] && level[i] + 1 < graded_levels;
+            if (open[i]) level[i] = std::min(want, graded_levels - 1);
+            again |= open[i];
+        }
+    }
+    if (errors.empty()) {
+        for (std::size_t i = 0; i < n; ++i)
+            for (std::size_t t = 0; t < maturities.size() && !solved[i]; ++t)
+                values[t * n + i] = std::numeric_limits<double>::quiet_NaN();
+        return;
+    }
+    std::vector<std::complex<double>> finer(values.size());
+    for (std::size_t i = 0; i < n; ++i) {
+        open[i] = solved[i];
+        level[i] = std::min(level[i] + 2, graded_levels - 1);
+        for (std::size_t t = 0; t < maturities.size(); ++t) errors[t * n + i] = infinity;
+    }
+    for (bool again = true; again;) {
+        pass(finer);
+        again = false;
+        for (std::size_t i = 0; i < n; ++i) {
+            if (!open[i]) continue;
+            bool met = true;
+            if (solved[i])
+                for (std::size_t t = 0; t < maturities.size(); ++t) {
+                    const std::size_t at = t * n + i;
+                    const double floor = 4.0 * std::numeric_limits<double>::epsilon() *
+                                         (std::abs(riccati(m, u[i]).c0) * integrals[t] +
+                                          std::abs(values[at])) *
+                                         std::exp(values[at].real());
+                    errors[at] = 1.5 * std::abs(std::exp(values[at]) - std::exp(finer[at])) + floor;
+                    met = met && errors[at] <= bounds[at];
+                }
+            open[i] = !(solved[i] && met) && level[i] + 1 < graded_levels;
+            if (!open[i]) continue;
+            if (solved[i])
+                for (std::size_t t = 0; t < maturities.size(); ++t)
+                    values[t * n + i] = finer[t * n + i];
+            level[i] = std::min(level[i] + 2, graded_levels - 1);
+            again = true;
+        }
     }
 }
 

@@ -86,4 +86,28 @@ inline bool real_schur(double* s, double* q, std::size_t n) {
     return true;
 }
 
+// Moves real eigenvalues up until every 2 x 2 block starts at an even row, n even: the diagonal is
+// then a sequence of aligned 2 x 2 blocks, some of them triangular.
+inline void align_schur(double* s, double* q, std::size_t n) {
+    auto starts_pair = [&](std::size_t i) { return i + 1 < n && s[(i + 1) * n + i] != 0.0; };
+    for (std::size_t i = 0; i + 1 < n; i += 2) {
+        if (starts_pair(i)) continue;
+        std::size_t j = i + 1;  // the next real eigenvalue
+        while (j < n && starts_pair(j)) j += 2;
+        for (; j > i + 1; j -= 2) {
+            // (x, 1) is the eigenvector of [pair a; 0 b] for b: a reflection that maps it to the
+            // first unit vector puts b first.
+            const double* t = s + (j - 2) * n + j - 2;
+            const double b = t[2 * n + 2], p = t[0] - b, r = t[n + 1] - b;
+            const double det = p * r - t[1] * t[n];
+            const double x[3] = {(-r * t[2] + t[1] * t[n + 2]) / det,
+                                 (t[n] * t[2] - p * t[n + 2]) / det, 1.0};
+            double v[3];
+            detail::householder(x, 3, v);
+            detail::reflect(s, q, n, j - 2, v, 3);
+            s[(j - 1) * n + j - 2] = s[j * n + j - 2] = 0.0;
+        }
+    }
+}
+
 }  // namespace volterra
