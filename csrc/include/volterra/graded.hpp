@@ -42,7 +42,7 @@ struct graded_block {
     const double* first_f;            // (m + 1) x functionals: t = 0 and the first element
     const double* first_psi;          // the same, or null
     const double* weights_f;          // (elements - 1) m x functionals
-    const double* weights_psi;        // the same, or null
+    const double* weights_psi;        // the same; read if first_psi is not null
     const std::size_t* first_active;  // [1 .. elements - 1]: functionals before it do not use it
     double accuracy;                  // relative accuracy asked of psi at the nodes
     double* values;                   // functionals x 2 x lanes
@@ -236,9 +236,6 @@ inline mask newton(const double* w, const quadratic& f, const double* h, double*
     return open;
 }
 
-#ifdef GX_COUNT
-inline long gx_count[64], gx_blocks[64];inline size_t gx_k;
-#endif
 // Whether every node has the root that continues the one at the left edge. Given the other nodes,
 // psi_i solves a quadratic, and the root that tends to its history as the weight w = W_ii tends
 // to 0 is the one with Re(1 - w G') > 0. False for nan.
@@ -300,7 +297,7 @@ VOLTERRA_INLINE void accumulate_functionals(const graded_block& b, std::size_t k
                                             const double* psi) {
     const std::size_t at = k ? (k - 1) * m * b.functionals : b.functionals;
     const double* const weights_f = (k ? b.weights_f : b.first_f) + at;
-    const double* const weights_psi = b.weights_psi ? (k ? b.weights_psi : b.first_psi) + at : nullptr;
+    const double* const weights_psi = b.first_psi ? (k ? b.weights_psi : b.first_psi) + at : nullptr;
     constexpr std::size_t tile = 3;
     std::size_t r = k ? b.first_active[k] : 0;
     auto rows = [&]<std::size_t n>() {
@@ -340,13 +337,7 @@ VOLTERRA_INLINE void solve_element(const graded_matrices& w, const quadratic (&f
         factor<m>(w.s, d[p], factors[p]);
     }
     bool working = w.paired;
-#ifdef GX_COUNT
-    gx_blocks[gx_k]++;
-#endif
     for (int step = 0; step < 12 && working; ++step) {
-#ifdef GX_COUNT
-    gx_count[gx_k]++;
-#endif
         VOLTERRA_UNROLL
         for (std::size_t j = 0; j < m; ++j)
             VOLTERRA_UNROLL
@@ -430,9 +421,6 @@ inline void solve(const graded_block& b) {
     }
 
     for (std::size_t k = 0; k < b.elements; ++k) {
-#ifdef GX_COUNT
-        gx_k=k;
-#endif
         double* const g = G + (1 + k * m) * row;  // this element's nodes
         const double scale = b.scales[k ? k - 1 : 0];
         constexpr std::size_t rows = tile_rows<m>;

@@ -130,6 +130,9 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
     }
 }
 
+// Where |phi| is small, this level is enough for most tolerances.
+inline constexpr std::size_t graded_coarse_level = 2;
+
 namespace detail {
 
 // int_0^T g0, the scale of rounding errors: an upper bound of int xi when curve and mean reversion
@@ -197,7 +200,10 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
         double bound = infinity;
         for (std::size_t t = 0; t < maturities.size(); ++t) bound = std::min(bound, bounds[t * n + i]);
         const double size = detail::expected_size(riccati(m, u[i]), m.alpha(), maturities, integrals);
+        // Two levels per call, so that two plans serve all u.
         level[i] = graded_level_for(std::min(bound / size, 0.1));
+        level[i] = level[i] <= graded_coarse_level ? graded_coarse_level
+                                                   : std::max(graded_level_for(bound), level[i]);
     }
     auto pass = [&](std::span<std::complex<double>> into) {
         for (std::size_t l = 0; l < graded_levels; ++l) {
@@ -238,16 +244,24 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
         for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
             bool met = true;
-            if (solved[i])
+            if (solved[i]) {
+                // A difference can vanish by chance at one maturity, hardly at all of them.
+                double relative = 0.0;
+                for (std::size_t t = 0; t < maturities.size(); ++t)
+                    relative = std::max(relative, std::abs(values[t * n + i] - finer[t * n + i]) /
+                                                      std::max(1.0, std::abs(values[t * n + i])));
+                relative = 0.25 * relative + 0.03 * graded_level_error(level[i]);
+                const double c0 = std::abs(riccati(m, u[i]).c0);
                 for (std::size_t t = 0; t < maturities.size(); ++t) {
                     const std::size_t at = t * n + i;
-                    const double floor = 4.0 * std::numeric_limits<double>::epsilon() *
-                                         (std::abs(riccati(m, u[i]).c0) * integrals[t] +
-                                          std::abs(values[at])) *
-                                         std::exp(values[at].real());
-                    errors[at] = 1.5 * std::abs(std::exp(values[at]) - std::exp(finer[at])) + floor;
+                    const double modulus = std::exp(values[at].real());
+                    const double floor = 8.0 * std::numeric_limits<double>::epsilon() *
+                                         (c0 * integrals[t] + std::abs(values[at]) + 1.0);
+                    errors[at] = 2.0 * std::abs(std::exp(values[at]) - std::exp(finer[at])) +
+                                 relative * size_of(values[at]) + floor * modulus;
                     met = met && errors[at] <= bounds[at];
                 }
+            }
             open[i] = !(solved[i] && met) && level[i] + 1 < graded_levels;
             if (!open[i]) continue;
             if (solved[i])

@@ -94,4 +94,13 @@ VOLTERRA_INLINE complex_pack quadratic_root(complex_pack e, complex_pack q, comp
     return ((2.0 * l) * e) / complex_pack{l * q.re + re, l * q.im + im};
 }
 
+// Principal square root (real part >= 0) by the half-angle formula, stable on both half planes.
+VOLTERRA_INLINE complex_pack sqrt(complex_pack z) {
+    const pack modulus = sqrt(z.re * z.re + z.im * z.im);
+    const pack larger = sqrt(0.5 * (modulus + abs(z.re)));
+    const pack smaller = larger > 0.0 ? 0.5 * z.im / larger : broadcast(0.0);
+    const auto right = z.re >= 0.0;
+    return {right ? larger : abs(smaller), right ? smaller : (z.im < 0.0 ? -larger : larger)};
+}
+
 }  // namespace volterra::VOLTERRA_TARGET
