@@ -13,6 +13,10 @@
 // the other lanes. No allocation, no exceptions, no standard-library templates: see simd.hpp.
 #pragma once
 
+#if defined(__AVX__)
+#include <immintrin.h>
+#endif
+
 #include "volterra/simd.hpp"
 
 namespace volterra {
@@ -84,9 +88,15 @@ VOLTERRA_INLINE complex_pack select(mask which, complex_pack a, complex_pack b) 
 VOLTERRA_INLINE pack norm(complex_pack z) { return z.re * z.re + z.im * z.im; }
 VOLTERRA_INLINE pack larger(pack a, pack b) { return a > b ? a : b; }
 VOLTERRA_INLINE bool any(mask which) {
+#if defined(__AVX512DQ__)
+    return _mm512_movepi64_mask(reinterpret_cast<__m512i>(which)) != 0;
+#elif defined(__AVX__)
+    return _mm256_movemask_pd(reinterpret_cast<__m256d>(which)) != 0;
+#else
     long long bits = 0;
     for (std::size_t i = 0; i < pack_width; ++i) bits |= which[i];
     return bits != 0;
+#endif
 }
 // a / b, and 0 where b = 0.
 VOLTERRA_INLINE complex_pack safe_divide(complex_pack a, complex_pack b) {
@@ -321,64 +331,100 @@ VOLTERRA_INLINE void accumulate_functionals(const graded_block& b, std::size_t k
 }
 
 // Solves psi = h + W G(psi) on one element from the guess in `psi`; `h` holds Q^T W^-1 h, `left` the
-// value at the left edge. The work rows y, z and `r` are overwritten. Returns through `open` the lanes that did not converge.
+// value at the left edge. The work rows `y` are overwritten. Returns through `open` the lanes that did not converge.
 template <std::size_t m>
 VOLTERRA_INLINE void solve_element(const graded_matrices& w, const quadratic (&f)[packs],
-                                   const double* h, const double* left, double* psi, double* r, double* y,
-                                   double* z, double accuracy, mask (&open)[packs]) {
-    pack last[packs];
-    complex_pack d[packs];
+                                   const double* h, const double* left, double* psi, double* y,
+                                   double accuracy, mask (&open)[packs]) {
+    pack last[packs], spread[packs];
+    complex_pack slope[packs];
     shifted_factors<m> factors[packs];
     VOLTERRA_UNROLL
     for (std::size_t p = 0; p < packs; ++p) {
         open[p] = f[p].c2 == f[p].c2;
         last[p] = broadcast(0.0);
-        d[p] = f[p].derivative(load_complex(psi + (m / 2) * row + p * pack_width));
-        factor<m>(w.s, d[p], factors[p]);
+        const complex_pack first = load_complex(psi + p * pack_width);
+        const complex_pack end = load_complex(psi + (m - 1) * row + p * pack_width);
+        const complex_pack middle = load_complex(psi + (m / 2) * row + p * pack_width);
+        const complex_pack d = f[p].derivative(middle);
+        slope[p] = f[p].c1 - d;
+        const pack away = larger(norm(first - middle), norm(end - middle));
+        spread[p] = 4.0 * f[p].c2 * f[p].c2 * away / (4.0 + norm(d));
+        factor<m>(w.s, d, factors[p]);
     }
     bool working = w.paired;
+    constexpr std::size_t rows = tile_rows<m>;
     for (int step = 0; step < 12 && working; ++step) {
+        // y = Q^T W^-1 h + Q^T (G(psi) - d psi)
         VOLTERRA_UNROLL
-        for (std::size_t j = 0; j < m; ++j)
+        for (std::size_t top = 0; top < m; top += rows) {
+            pack acc[rows][row_packs];
             VOLTERRA_UNROLL
-            for (std::size_t p = 0; p < packs; ++p) {
-                const complex_pack x = load_complex(psi + j * row + p * pack_width);
-                store_complex(r + j * row + p * pack_width,
-                              f[p].c0 + (f[p].c1 - d[p] + f[p].c2 * x) * x);
+            for (std::size_t i = 0; i < rows; ++i)
+                VOLTERRA_UNROLL
+                for (std::size_t c = 0; c < row_packs; ++c)
+                    acc[i][c] = load(h + (top + i) * row + c * pack_width);
+            VOLTERRA_UNROLL
+            for (std::size_t j = 0; j < m; ++j) {
+                pack x[row_packs];
+                VOLTERRA_UNROLL
+                for (std::size_t p = 0; p < packs; ++p) {
+                    const complex_pack v = load_complex(psi + j * row + p * pack_width);
+                    const complex_pack g = f[p].c0 + (slope[p] + f[p].c2 * v) * v;
+                    x[p] = g.re, x[packs + p] = g.im;
+                }
+                VOLTERRA_UNROLL
+                for (std::size_t i = 0; i < rows; ++i) {
+                    const pack a = broadcast(w.q_transposed[j * m + top + i]);
+                    VOLTERRA_UNROLL
+                    for (std::size_t c = 0; c < row_packs; ++c) acc[i][c] += a * x[c];
+                }
             }
-        multiply<m>(w.q_transposed, r, m, y);
+            VOLTERRA_UNROLL
+            for (std::size_t i = 0; i < rows; ++i)
+                VOLTERRA_UNROLL
+                for (std::size_t c = 0; c < row_packs; ++c)
+                    store(y + (top + i) * row + c * pack_width, acc[i][c]);
+        }
         VOLTERRA_UNROLL
         for (std::size_t p = 0; p < packs; ++p) {
             complex_pack x[m];
             const std::size_t c = p * pack_width;
             VOLTERRA_UNROLL
-            for (std::size_t j = 0; j < m; ++j)
-                x[j] = load_complex(y + j * row + c) + load_complex(h + j * row + c);
+            for (std::size_t j = 0; j < m; ++j) x[j] = load_complex(y + j * row + c);
             solve_shifted<m>(w.s, factors[p], x);
             VOLTERRA_UNROLL
             for (std::size_t j = 0; j < m; ++j) store_complex(y + j * row + c, x[j]);
         }
-        multiply<m>(w.q, y, m, z);
+        // psi = Q y, and the size of the step
+        pack size[packs] = {}, height[packs] = {};
+        VOLTERRA_UNROLL
+        for (std::size_t top = 0; top < m; top += rows) {
+            pack acc[rows][row_packs] = {};
+            multiply_tile<rows>(acc, w.q + top, m, y, m);
+            VOLTERRA_UNROLL
+            for (std::size_t i = 0; i < rows; ++i)
+                VOLTERRA_UNROLL
+                for (std::size_t p = 0; p < packs; ++p) {
+                    const std::size_t at = (top + i) * row + p * pack_width;
+                    const complex_pack x = {acc[i][p], acc[i][packs + p]};
+                    const complex_pack old = load_complex(psi + at);
+                    size[p] = larger(size[p], norm(x - old));
+                    height[p] = larger(height[p], norm(x));
+                    store_complex(psi + at, select(open[p], x, old));
+                }
+        }
         working = false;
         VOLTERRA_UNROLL
         for (std::size_t p = 0; p < packs; ++p) {
-            const std::size_t c = p * pack_width;
-            pack size = broadcast(0.0), height = broadcast(0.0);
-            VOLTERRA_UNROLL
-            for (std::size_t j = 0; j < m; ++j) {
-                const complex_pack x = load_complex(z + j * row + c);
-                const complex_pack old = load_complex(psi + j * row + c);
-                size = larger(size, norm(x - old));
-                height = larger(height, norm(x));
-                store_complex(psi + j * row + c, select(open[p], x, old));
-            }
             // What is left is the last step times theta/(1 - theta), theta the observed
-            // contraction, 0.3 before one has been seen.
-            const pack theta2 = step ? size / last[p] : broadcast(0.09);
-            const pack goal = height * (accuracy * accuracy);
-            last[p] = size;
-            open[p] = open[p] & ~((size * theta2 <= 0.25 * goal) & (theta2 < 0.25));
-            open[p] = open[p] & ~(size <= 1e-30 * height);
+            // contraction; before one has been seen, how far the derivative strays from d.
+            const pack by = step ? size[p] : spread[p], from = step ? last[p] : broadcast(1.0);
+            const pack goal = height[p] * (0.25 * accuracy * accuracy);
+            last[p] = size[p];
+            const mask done = ((size[p] * by <= goal * from) & (by < 0.25 * from)) |
+                              (size[p] <= 1e-30 * height[p]);
+            open[p] = open[p] & ~done;
             working |= any(open[p]);
         }
     }
@@ -458,7 +504,7 @@ inline void solve(const graded_block& b) {
             }
         }
         mask open[packs];
-        solve_element<m>(k ? b.step : b.start, f, h, psi_edge, psi, g, y, z, b.accuracy, open);
+        solve_element<m>(k ? b.step : b.start, f, h, psi_edge, psi, y, b.accuracy, open);
         VOLTERRA_UNROLL
         for (std::size_t p = 0; p < packs; ++p)
             for (std::size_t i = 0; i < pack_width; ++i)

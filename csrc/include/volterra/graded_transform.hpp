@@ -114,16 +114,19 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
                 c1[i] = from.c1.real(), c1[lanes + i] = from.c1.imag();
             }
             kernels.solve_graded_block(block);
-            for (std::size_t i = 0; i < filled; ++i) {
-                const std::size_t at = which[order[start + i]];
-                bool good = status[i] == 0.0;
-                for (std::size_t r = 0; r < functional.count; ++r) {
-                    const double re = block_values[r * row + i];
-                    const double im = block_values[r * row + lanes + i];
-                    values[r * u.size() + at] = {re, im};
-                    good = good && re - re == 0.0 && im - im == 0.0;
+            for (std::size_t i = 0; i < filled; ++i) solved[which[order[start + i]]] = status[i] == 0.0;
+            for (std::size_t r = 0; r < functional.count; ++r) {
+                const double* const re = block_values.data() + r * row;
+                const double* const im = re + lanes;
+                double finite = 0.0;
+                for (std::size_t i = 0; i < filled; ++i) {
+                    values[r * u.size() + which[order[start + i]]] = {re[i], im[i]};
+                    finite += re[i] * 0.0 + im[i] * 0.0;
                 }
-                solved[at] = good;
+                if (finite == 0.0) continue;
+                for (std::size_t i = 0; i < filled; ++i)
+                    if (re[i] - re[i] != 0.0 || im[i] - im[i] != 0.0)
+                        solved[which[order[start + i]]] = false;
             }
         }
         start = end;
@@ -149,21 +152,19 @@ inline double integrated_curve(const variance_curve& curve, double alpha, double
     return sum;
 }
 
-// What |phi| max(1, |log phi|) will be at its largest maturity, roughly: psi from a rational function
-// of t^alpha with the right start and limit, log phi = (int g0) psi / t^alpha. Only chooses the level
-// a u starts from; graded_log_transform checks the outcome.
-inline double expected_size(const riccati_coefficients& c, double alpha,
-                            std::span<const double> maturities,
+// What |phi| will be at its largest maturity, roughly: psi from a rational function of z = t^alpha
+// with the right start and limit, log phi = (int g0) psi / z. Only chooses the level a u starts
+// from; solve_log_transform checks the outcome.
+inline double expected_size(const riccati_coefficients& c, std::span<const double> powers,
                             std::span<const double> integrals) {
-    const std::complex<double> root = std::sqrt(c.c1 * c.c1 - 4.0 * c.c0 * c.c2);
-    const std::complex<double> limit = root - c.c1;  // psi(inf) = 2 c0 / limit
-    double largest = 0.0;
-    for (std::size_t t = 0; t < maturities.size(); ++t) {
-        const double z = std::pow(maturities[t], alpha);
-        const double decay = -(integrals[t] * c.c0 / (1.0 + 0.5 * z * limit)).real();
-        largest = std::max(largest, std::exp(-0.7 * decay));
+    const std::complex<double> limit = std::sqrt(c.c1 * c.c1 - 4.0 * c.c0 * c.c2) - c.c1;
+    double decay = std::numeric_limits<double>::infinity();
+    for (const std::size_t t : {std::size_t{0}, powers.size() / 2, powers.size() - 1}) {
+        const double re = 1.0 + 0.5 * powers[t] * limit.real(), im = 0.5 * powers[t] * limit.imag();
+        const double real = (c.c0.real() * re + c.c0.imag() * im) / (re * re + im * im);
+        decay = std::min(decay, -integrals[t] * real);
     }
-    return std::min(largest, 1.0);
+    return std::exp(-0.7 * std::max(decay, 0.0));
 }
 
 }  // namespace detail
@@ -182,29 +183,45 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
                                 std::span<std::complex<double>> values, std::span<double> errors) {
     const std::size_t n = u.size();
     const double infinity = std::numeric_limits<double>::infinity();
-    std::vector<double> integrals;
-    for (double t : maturities) integrals.push_back(detail::integrated_curve(curve, m.alpha(), t));
+    std::vector<double> integrals, powers;
+    for (double t : maturities) {
+        integrals.push_back(detail::integrated_curve(curve, m.alpha(), t));
+        powers.push_back(std::pow(t, m.alpha()));
+    }
     auto size_of = [](std::complex<double> log_phi) {
         return std::exp(log_phi.real()) * std::max(1.0, std::abs(log_phi));
     };
-    auto needed = [&](std::size_t i) {  // the level that bounds ask for, given values
-        double error = 1.0;
-        for (std::size_t t = 0; t < maturities.size(); ++t)
-            error = std::min(error, bounds[t * n + i] / size_of(values[t * n + i]));
-        return graded_level_for(error);
-    };
 
-    std::vector<std::size_t> level(n), which;
+    std::vector<std::size_t> level(n), base(n), which;
+    std::vector<double> bound(n, infinity);
     std::vector<char> solved(n, 0), open(n, 1);
+    for (std::size_t t = 0; t < maturities.size(); ++t)
+        for (std::size_t i = 0; i < n; ++i) bound[i] = std::min(bound[i], bounds[t * n + i]);
     for (std::size_t i = 0; i < n; ++i) {
-        double bound = infinity;
-        for (std::size_t t = 0; t < maturities.size(); ++t) bound = std::min(bound, bounds[t * n + i]);
-        const double size = detail::expected_size(riccati(m, u[i]), m.alpha(), maturities, integrals);
+        base[i] = level[i] = graded_level_for(bound[i]);
         // Two levels per call, so that two plans serve all u.
-        level[i] = graded_level_for(std::min(bound / size, 0.1));
-        level[i] = level[i] <= graded_coarse_level ? graded_coarse_level
-                                                   : std::max(graded_level_for(bound), level[i]);
+        if (base[i] > graded_coarse_level &&
+            detail::expected_size(riccati(m, u[i]), powers, integrals) *
+                    graded_level_error(graded_coarse_level) < bound[i])
+            level[i] = graded_coarse_level;
     }
+    // |exp(z) - 1|, to a tenth of a percent
+    auto change = [](std::complex<double> z) {
+        const double size = std::abs(z);
+        return size < 1e-3 ? size : std::abs(std::exp(z) - 1.0);
+    };
+    // Whether values[., i], solved at a level coarser than base[i], are good enough.
+    auto fine_enough = [&](std::size_t i) {
+        const double error = graded_level_error(level[i]);
+        const double clear = std::log(bound[i] / error) - 8.0;  // size_of < e^8 |phi| there
+        for (std::size_t t = 0; t < maturities.size(); ++t) {
+            const auto value = values[t * n + i];
+            if (value.real() < clear && std::abs(value.real()) + std::abs(value.imag()) < 2900.0)
+                continue;
+            if (size_of(value) * error > bound[i]) return false;
+        }
+        return true;
+    };
     auto pass = [&](std::span<std::complex<double>> into) {
         for (std::size_t l = 0; l < graded_levels; ++l) {
             which.clear();
@@ -220,9 +237,10 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
         again = false;
         for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
-            const std::size_t want = solved[i] ? needed(i) : level[i] + 2;
-            open[i] = want > level[i] && level[i] + 1 < graded_levels;
-            if (open[i]) level[i] = std::min(want, graded_levels - 1);
+            open[i] = level[i] + 1 < graded_levels &&
+                      (!solved[i] || (level[i] < base[i] && !fine_enough(i)));
+            if (open[i])
+                level[i] = solved[i] ? base[i] : std::min(level[i] + 2, graded_levels - 1);
             again |= open[i];
         }
     }
@@ -257,8 +275,9 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
                     const double modulus = std::exp(values[at].real());
                     const double floor = 8.0 * std::numeric_limits<double>::epsilon() *
                                          (c0 * integrals[t] + std::abs(values[at]) + 1.0);
-                    errors[at] = 2.0 * std::abs(std::exp(values[at]) - std::exp(finer[at])) +
-                                 relative * size_of(values[at]) + floor * modulus;
+                    const double length = std::hypot(values[at].real(), values[at].imag());
+                    errors[at] = modulus * (2.0 * change(finer[at] - values[at]) + floor +
+                                            relative * std::max(1.0, length));
                     met = met && errors[at] <= bounds[at];
                 }
             }
