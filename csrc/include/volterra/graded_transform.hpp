@@ -170,8 +170,9 @@ inline double expected_size(const riccati_coefficients& c, std::span<const doubl
 }  // namespace detail
 
 // log E[exp(iuX_T)] by the graded scheme, maturities x u, and the absolute error of phi for every
-// value when `errors` is not empty (its size is that of `values`; inf where no level converged).
-// `bounds` (maturities x u) is the error asked for. Maturities must ascend.
+// value when `errors` is not empty (its size is that of `values`). `bounds` (maturities x u) is the
+// error asked for. Maturities must ascend. Where no level converged, which is what happens past an
+// explosion time, the value is nan and its error inf.
 //
 // Each u is solved at the level its bound needs, coarser where |phi| is small at every maturity. With
 // errors it is solved a second time two levels finer, and again until the difference is below
@@ -244,12 +245,10 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
             again |= open[i];
         }
     }
-    if (errors.empty()) {
-        for (std::size_t i = 0; i < n; ++i)
-            for (std::size_t t = 0; t < maturities.size() && !solved[i]; ++t)
-                values[t * n + i] = std::numeric_limits<double>::quiet_NaN();
-        return;
-    }
+    for (std::size_t i = 0; i < n; ++i)
+        for (std::size_t t = 0; t < maturities.size() && !solved[i]; ++t)
+            values[t * n + i] = std::numeric_limits<double>::quiet_NaN();
+    if (errors.empty()) return;
     std::vector<std::complex<double>> finer(values.size());
     for (std::size_t i = 0; i < n; ++i) {
         open[i] = solved[i];
