@@ -133,6 +133,9 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
     }
 }
 
+// How many levels finer the solution is that a value is compared with.
+inline constexpr std::size_t graded_check_step = 2;
+
 // Where |phi| is small, this level is enough for most tolerances.
 inline constexpr std::size_t graded_coarse_level = 2;
 
@@ -189,8 +192,9 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
         integrals.push_back(detail::integrated_curve(curve, m.alpha(), t));
         powers.push_back(std::pow(t, m.alpha()));
     }
-    auto size_of = [](std::complex<double> log_phi) {
-        return std::exp(log_phi.real()) * std::max(1.0, std::abs(log_phi));
+    auto length = [](std::complex<double> z) { return std::sqrt(std::norm(z)); };
+    auto size_of = [&](std::complex<double> log_phi) {
+        return std::exp(log_phi.real()) * std::max(1.0, length(log_phi));
     };
 
     std::vector<std::size_t> level(n), base(n), which;
@@ -201,14 +205,17 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
     for (std::size_t i = 0; i < n; ++i) {
         base[i] = level[i] = graded_level_for(bound[i]);
         // Two levels per call, so that two plans serve all u.
-        if (base[i] > graded_coarse_level &&
-            detail::expected_size(riccati(m, u[i]), powers, integrals) *
+        if (base[i] <= graded_coarse_level) continue;
+        const auto c = riccati(m, u[i]);
+        const double most = 0.7 * std::abs(c.c0) * integrals.front();
+        if (std::exp(-most) * graded_level_error(graded_coarse_level) < bound[i] &&
+            detail::expected_size(c, powers, integrals) *
                     graded_level_error(graded_coarse_level) < bound[i])
             level[i] = graded_coarse_level;
     }
     // |exp(z) - 1|, to a tenth of a percent
-    auto change = [](std::complex<double> z) {
-        const double size = std::abs(z);
+    auto change = [&](std::complex<double> z) {
+        const double size = length(z);
         return size < 1e-3 ? size : std::abs(std::exp(z) - 1.0);
     };
     // Whether values[., i], solved at a level coarser than base[i], are good enough.
@@ -252,7 +259,7 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
     std::vector<std::complex<double>> finer(values.size());
     for (std::size_t i = 0; i < n; ++i) {
         open[i] = solved[i];
-        level[i] = std::min(level[i] + 2, graded_levels - 1);
+        level[i] = std::min(level[i] + graded_check_step, graded_levels - 1);
         for (std::size_t t = 0; t < maturities.size(); ++t) errors[t * n + i] = infinity;
     }
     for (bool again = true; again;) {
@@ -265,18 +272,19 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
                 // A difference can vanish by chance at one maturity, hardly at all of them.
                 double relative = 0.0;
                 for (std::size_t t = 0; t < maturities.size(); ++t)
-                    relative = std::max(relative, std::abs(values[t * n + i] - finer[t * n + i]) /
-                                                      std::max(1.0, std::abs(values[t * n + i])));
+                    relative = std::max(relative, std::norm(values[t * n + i] - finer[t * n + i]) /
+                                                      std::max(1.0, std::norm(values[t * n + i])));
+                relative = std::sqrt(relative);
                 relative = 0.25 * relative + 0.03 * graded_level_error(level[i]);
                 const double c0 = std::abs(riccati(m, u[i]).c0);
                 for (std::size_t t = 0; t < maturities.size(); ++t) {
                     const std::size_t at = t * n + i;
                     const double modulus = std::exp(values[at].real());
+                    const double size = length(values[at]);
                     const double floor = 8.0 * std::numeric_limits<double>::epsilon() *
-                                         (c0 * integrals[t] + std::abs(values[at]) + 1.0);
-                    const double length = std::hypot(values[at].real(), values[at].imag());
+                                         (c0 * integrals[t] + size + 1.0);
                     errors[at] = modulus * (2.0 * change(finer[at] - values[at]) + floor +
-                                            relative * std::max(1.0, length));
+                                            relative * std::max(1.0, size));
                     met = met && errors[at] <= bounds[at];
                 }
             }

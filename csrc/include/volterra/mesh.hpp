@@ -2,9 +2,11 @@
 //
 // In units of the relaxation time of the linearised equation, t_* = (|c1|^2 + 4 |c0 c2|)^(-1/2 alpha),
 // the solution looks much the same for all parameters: the interpolation error depends on (m, q),
-// alpha and b/t_* alone, up to a modest factor. The ladder below was measured with it: 99.9 % of
-// 12,800 random cases per hurst (vol_of_vol .05 to 2.5, correlation -1 to .6, mean reversion 0 to 4,
-// an hour to 30 years, |u| to 2000) stay below the level's error, relative to max(1, |log phi|).
+// alpha and b/t_* alone, up to a modest factor. The ladder below was chosen from the errors of 12,800
+// random values per hurst and mesh (vol_of_vol .05 to 2.5, correlation -1 to .6, mean reversion 0 to
+// 4, an hour to 30 years, |u| to 2000): about 99.9 % stay below the level's error, relative to
+// max(1, |log phi|). Measured as error of phi on narrower cases (vol_of_vol .1 to 1, maturities a
+// day to 10 years, |u| to 1000): 11 of 96,000 values beyond 1e-8, 13 of 44,800 beyond 1e-10.
 #pragma once
 
 #include <algorithm>
