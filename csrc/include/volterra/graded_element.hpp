@@ -343,7 +343,7 @@ VOLTERRA_INLINE void solve_element(const graded_matrices& w, const quadratic (&f
                     const complex_pack x = {acc[i][p], acc[i][packs + p]};
                     const complex_pack old = load_complex(psi + at);
                     size[p] = larger(size[p], norm(x - old));
-                    height[p] = larger(height[p], norm(x));
+                    if (top + i + 1 == m) height[p] = norm(x);
                     store_complex(psi + at, select(open[p], x, old));
                 }
         }
