@@ -5,6 +5,7 @@
 
 namespace volterra {
 
-const target_kernels kernels_avx2 = {"avx2", avx2::adams_lanes, avx2::solve_adams_block};
+const target_kernels kernels_avx2 = {"avx2", avx2::adams_lanes, avx2::solve_adams_block,
+                                   avx2::graded_lanes, avx2::solve_graded_block};
 
 }  // namespace volterra

@@ -4,6 +4,7 @@
 #include <cstddef>
 
 #include "volterra/adams.hpp"
+#include "volterra/graded.hpp"
 
 namespace volterra {
 
@@ -11,6 +12,8 @@ struct target_kernels {
     const char* name;
     std::size_t adams_lanes;
     void (*solve_adams_block)(const adams_block&);
+    std::size_t graded_lanes;
+    void (*solve_graded_block)(const graded_block&);
 };
 
 extern const target_kernels kernels_baseline;

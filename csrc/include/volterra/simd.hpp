@@ -41,7 +41,7 @@ inline constexpr std::size_t vector_registers = 16;
 typedef double pack __attribute__((vector_size(sizeof(double) * pack_width)));
 
 VOLTERRA_INLINE pack sqrt(pack x) {
-    pack r;
+    pack r = x;
     for (std::size_t i = 0; i < pack_width; ++i) r[i] = __builtin_sqrt(x[i]);
     return r;
 }
@@ -92,6 +92,15 @@ VOLTERRA_INLINE complex_pack quadratic_root(complex_pack e, complex_pack q, comp
     const pack re = right ? half : 0.5 * abs(z.im);
     const pack im = right ? 0.5 * z.im : (z.im < 0.0 ? -half : half);
     return ((2.0 * l) * e) / complex_pack{l * q.re + re, l * q.im + im};
+}
+
+// Principal square root (real part >= 0) by the half-angle formula, stable on both half planes.
+VOLTERRA_INLINE complex_pack sqrt(complex_pack z) {
+    const pack modulus = sqrt(z.re * z.re + z.im * z.im);
+    const pack larger = sqrt(0.5 * (modulus + abs(z.re)));
+    const pack smaller = larger > 0.0 ? 0.5 * z.im / larger : broadcast(0.0);
+    const auto right = z.re >= 0.0;
+    return {right ? larger : abs(smaller), right ? smaller : (z.im < 0.0 ? -larger : larger)};
 }
 
 }  // namespace volterra::VOLTERRA_TARGET
