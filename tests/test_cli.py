@@ -14,7 +14,7 @@ import pyvolterra as pv
 from pyvolterra import calibration, cli, demo
 
 # The arbitrage check of a fit may say that it was a little less accurate than it aimed for.
-pytestmark = pytest.mark.filterwarnings("default::pyvolterra.errors.AccuracyWarning")
+
 
 WRITTEN = {"fit.json", "residuals.csv", "report.html", "smiles"}
 HEADER = "quote_time,expiry,strike,option_type,bid,ask\n"

@@ -17,7 +17,7 @@ from pyvolterra import black, demo
 from pyvolterra.report import figures, files, render_report, slices, write_report
 
 # The arbitrage check of a fit may say that it was a little less accurate than it aimed for.
-pytestmark = pytest.mark.filterwarnings("default::pyvolterra.errors.AccuracyWarning")
+
 
 
 @pytest.fixture(scope="module")

@@ -8,8 +8,9 @@ namespace {
 
 scheme to_scheme(const std::string& name) {
     if (name == "auto") return scheme::automatic;
+    if (name == "graded") return scheme::graded;
     if (name == "adams") return scheme::adams;
-    throw py::value_error("scheme must be one of 'auto', 'adams', got '" + name + "'");
+    throw py::value_error("scheme must be one of 'auto', 'graded', 'adams', got '" + name + "'");
 }
 
 const target_kernels& to_kernels(const std::string& instruction_set) {

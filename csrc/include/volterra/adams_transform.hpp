@@ -45,8 +45,8 @@ inline void solve_adams(const target_kernels& kernels, const model_parameters& m
                         std::span<std::complex<double>> psi = {}) {
     const std::size_t lanes = kernels.adams_lanes, row = 2 * lanes;
     const adams_mesh mesh(m.alpha(), maturity, steps);
-    const auto workspace = make_aligned_buffer(adams_workspace(steps, lanes));
-    std::vector<double> c0(row), c1(row), block_values(rows.count * row);
+    aligned_buffer workspace(adams_workspace(steps, lanes));
+    aligned_buffer c0(row), c1(row), block_values(rows.count * row);
     std::vector<double> block_psi(psi.empty() ? 0 : (steps + 1) * row);
     for (std::size_t start = 0; start < u.size(); start += lanes) {
         const std::size_t count = std::min(lanes, u.size() - start);
@@ -60,7 +60,7 @@ inline void solve_adams(const target_kernels& kernels, const model_parameters& m
         kernels.solve_adams_block({c0.data(), c1.data(), c2, steps, mesh.weights.diagonal,
                                    mesh.weights.lag.data(), mesh.weights.first.data(), mesh.leaves,
                                    rows.count, rows.f.data(), rows.psi.data(), block_values.data(),
-                                   psi.empty() ? nullptr : block_psi.data(), workspace.get()});
+                                   psi.empty() ? nullptr : block_psi.data(), workspace.data()});
         auto unpack = [&](const double* from, std::complex<double>* to) {
             for (std::size_t i = 0; i < count; ++i) to[i] = {from[i], from[lanes + i]};
         };

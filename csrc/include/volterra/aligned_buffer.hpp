@@ -1,21 +1,28 @@
-// Doubles on a cache-line boundary, so that no vector load straddles two lines.
+// Doubles on a cache-line boundary: a vector load that straddles two lines costs twice.
 #pragma once
 
+#include <algorithm>
 #include <cstddef>
 #include <memory>
 #include <new>
 
 namespace volterra {
 
-struct aligned_delete {
-    void operator()(double* p) const noexcept { ::operator delete(p, std::align_val_t{64}); }
+class aligned_buffer {
+public:
+    explicit aligned_buffer(std::size_t size)
+        : data_(static_cast<double*>(::operator new(size * sizeof(double), alignment))) {
+        std::fill_n(data_.get(), size, 0.0);
+    }
+    double* data() { return data_.get(); }
+    double& operator[](std::size_t i) { return data_[i]; }
+
+private:
+    static constexpr std::align_val_t alignment{64};
+    struct release {
+        void operator()(double* p) const noexcept { ::operator delete(p, alignment); }
+    };
+    std::unique_ptr<double[], release> data_;
 };
-
-using aligned_buffer = std::unique_ptr<double[], aligned_delete>;
-
-inline aligned_buffer make_aligned_buffer(std::size_t size) {
-    void* const memory = ::operator new(size * sizeof(double), std::align_val_t{64});
-    return aligned_buffer(static_cast<double*>(memory));
-}
 
 }  // namespace volterra

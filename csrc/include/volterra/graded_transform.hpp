@@ -11,33 +11,18 @@
 #include <cmath>
 #include <complex>
 #include <cstddef>
-#include <cstdint>
 #include <limits>
 #include <span>
 #include <vector>
 
 #include "targets.hpp"
+#include "volterra/aligned_buffer.hpp"
 #include "volterra/graded_functional.hpp"
 #include "volterra/mesh.hpp"
 
 namespace volterra {
 
 namespace detail {
-
-// Doubles on a cache-line boundary: a 64-byte load that straddles two lines costs twice.
-class aligned_buffer {
-public:
-    explicit aligned_buffer(std::size_t size) : storage_(size + 8, 0.0) {
-        const auto address = reinterpret_cast<std::uintptr_t>(storage_.data());
-        offset_ = (64 - address % 64) % 64 / sizeof(double);
-    }
-    double* data() { return storage_.data() + offset_; }
-    double& operator[](std::size_t i) { return data()[i]; }
-
-private:
-    std::vector<double> storage_;
-    std::size_t offset_;
-};
 
 inline graded_block work_order(const graded_plan& plan) {
     graded_block b{};
@@ -95,8 +80,8 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
     const auto plan = make_graded_plan(m.alpha(), table_of(level.nodes, level.ratio), most);
     const graded_meshes meshes(plan, horizon, most);
     const auto functional = make_functional(meshes, curve, m.mean_reversion, maturities, basis);
-    detail::aligned_buffer c0(row), c1(row), status(lanes), block_values(functional.count * row);
-    detail::aligned_buffer workspace(graded_workspace(level.nodes, most, lanes));
+    aligned_buffer c0(row), c1(row), status(lanes), block_values(functional.count * row);
+    aligned_buffer workspace(graded_workspace(level.nodes, most, lanes));
     auto block = detail::work_order(plan);
     block.c0 = c0.data(), block.c1 = c1.data(), block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
     block.accuracy = level.accuracy;

@@ -1,23 +1,25 @@
 // log E[exp(iuX_T)] for many u and maturities with an error estimate, by the scheme asked for.
 #pragma once
 
+#include <algorithm>
 #include <cmath>
 #include <complex>
 #include <cstddef>
 #include <limits>
 #include <map>
 #include <span>
-#include <stdexcept>
 #include <vector>
 
 #include "volterra/adams_transform.hpp"
 #include "volterra/classical.hpp"
 #include "volterra/explosion.hpp"
+#include "volterra/graded_transform.hpp"
 #include "volterra/model.hpp"
 
 namespace volterra {
 
-enum class scheme { automatic, adams };
+// automatic: the closed form at hurst 1/2, graded elsewhere.
+enum class scheme { automatic, graded, adams };
 
 struct transform_options {
     scheme method = scheme::automatic;
@@ -31,78 +33,161 @@ struct transform_result {
     double worst_ratio = 0.0;  // largest error / (tolerance phi(i Im u)); above 1: tolerance missed
 };
 
-namespace detail {
+// One request in progress: maturities ascend, every array is maturities x u.
+class transform_request {
+public:
+    using complex = std::complex<double>;
 
-// Rounding: log phi is a sum of terms of size |c0| xi T, each with a relative error of some ulp.
-inline double rounding_error(const model_parameters& m, std::complex<double> u,
-                             std::complex<double> log_phi, double total_variance) {
-    constexpr double ulp = std::numeric_limits<double>::epsilon();
-    const double size = std::abs(riccati(m, u).c0) * total_variance + std::abs(log_phi);
-    return 4.0 * ulp * size * std::exp(log_phi.real());
-}
+    transform_request(const target_kernels& kernels, const model_parameters& m,
+                      const variance_curve& curve, std::span<const complex> u,
+                      std::span<const double> maturities, const transform_options& options)
+        : kernels_(kernels), m_(m), curve_(curve), u_(u), maturities_(maturities),
+          options_(options), closed_form_(options.method == scheme::automatic && m.hurst == 0.5) {
+        const std::size_t size = u.size() * maturities.size();
+        result.values.resize(size);
+        result.errors.assign(size, 0.0);
+        bounds_.assign(size, options.tolerance);
+    }
 
-}  // namespace detail
+    void run() {
+        if (result.values.empty()) return;
+        scale_bounds();
+        if (closed_form_)
+            solve_closed_form();
+        else if (options_.method == scheme::adams)
+            for (std::size_t t = 0; t < maturities_.size(); ++t) solve_uniform(t);
+        else
+            solve_on_graded_mesh();
+        for (std::size_t i = 0; i < bounds_.size(); ++i)
+            result.worst_ratio = std::max(result.worst_ratio, result.errors[i] / bounds_[i]);
+    }
 
+    transform_result result;
+
+private:
+    std::size_t at(std::size_t t, std::size_t i) const { return t * u_.size() + i; }
+
+    // The tolerance is relative to phi(i Im u), which is 1 on the real axis; on the way every
+    // moment is checked to be finite.
+    void scale_bounds() {
+        std::map<double, std::size_t> moments;
+        std::vector<complex> axis;
+        for (const auto& z : u_)
+            if (moments.try_emplace(z.imag(), axis.size()).second) axis.emplace_back(0.0, z.imag());
+        for (const auto& [y, position] : moments)
+            for (double maturity : maturities_) require_finite_moment(m_, -y, maturity);
+        const auto sizes = rough_values(axis);
+        for (std::size_t t = 0; t < maturities_.size(); ++t)
+            for (std::size_t i = 0; i < u_.size(); ++i) {
+                const double y = u_[i].imag();
+                if (y == 0.0 || y == -1.0) continue;  // E[1] = E[exp X] = 1
+                bounds_[at(t, i)] *= std::exp(sizes[t * axis.size() + moments[y]].real());
+            }
+    }
+
+    // Values good to a few digits, for scales.
+    std::vector<complex> rough_values(std::span<const complex> u) const {
+        std::vector<complex> values(maturities_.size() * u.size());
+        if (closed_form_) {
+            for (std::size_t t = 0; t < maturities_.size(); ++t)
+                for (std::size_t i = 0; i < u.size(); ++i)
+                    values[t * u.size() + i] = classical(u[i], maturities_[t]);
+            return values;
+        }
+        const std::vector<double> bounds(values.size(), 1e-3);
+        solve_log_transform(kernels_, m_, curve_, u, maturities_, bounds, values, {});
+        return values;
+    }
+
+    complex classical(complex z, double maturity) const {
+        std::vector<complex> basis(curve_.basis_size());
+        classical_basis(m_, curve_, z, maturity, basis.data());
+        const bool driven = curve_.form == curve_form::driven;
+        complex sum = driven ? curve_.initial * basis[0] : 0.0;
+        for (std::size_t k = 0; k < curve_.levels.size(); ++k)
+            sum += curve_.levels[k] * basis[k + driven];
+        return sum;
+    }
+
+    void solve_closed_form() {
+        for (std::size_t t = 0; t < maturities_.size(); ++t)
+            for (std::size_t i = 0; i < u_.size(); ++i) {
+                result.values[at(t, i)] = classical(u_[i], maturities_[t]);
+                result.errors[at(t, i)] = rounding_error(t, i);
+            }
+    }
+
+    void solve_uniform(std::size_t t) {
+        const std::span<complex> values(result.values.data() + at(t, 0), u_.size());
+        const std::span<double> errors(result.errors.data() + at(t, 0), u_.size());
+        const std::span<const double> bounds(bounds_.data() + at(t, 0), u_.size());
+        if (options_.steps)
+            adams_with_error(kernels_, m_, curve_, u_, maturities_[t], options_.steps, values,
+                             errors);
+        else
+            adams_to_tolerance(kernels_, m_, curve_, u_, maturities_[t], bounds, values, errors);
+        for (std::size_t i = 0; i < u_.size(); ++i) errors[i] += rounding_error(t, i);
+    }
+
+    void solve_on_graded_mesh() {
+        solve_log_transform(kernels_, m_, curve_, u_, maturities_, bounds_, result.values,
+                            result.errors);
+        // A u that no mesh could solve goes to the uniform scheme, with that scheme's error.
+        for (std::size_t i = 0; i < u_.size(); ++i)
+            for (std::size_t t = 0; t < maturities_.size(); ++t)
+                if (!(result.errors[at(t, i)] < std::numeric_limits<double>::infinity()) ||
+                    std::isnan(result.values[at(t, i)].real())) {
+                    adams_to_tolerance(kernels_, m_, curve_, u_.subspan(i, 1), maturities_[t],
+                                       {&bounds_[at(t, i)], 1}, {&result.values[at(t, i)], 1},
+                                       {&result.errors[at(t, i)], 1});
+                    result.errors[at(t, i)] += rounding_error(t, i);
+                }
+    }
+
+    // log phi is a sum of terms of size |c0| int xi, each with a relative error of some ulp.
+    double rounding_error(std::size_t t, std::size_t i) const {
+        constexpr double ulp = std::numeric_limits<double>::epsilon();
+        const complex value = result.values[at(t, i)];
+        const double size =
+            std::abs(riccati(m_, u_[i]).c0) *
+                detail::integrated_curve(curve_, m_.alpha(), maturities_[t]) +
+            std::abs(value);
+        return 4.0 * ulp * size * std::exp(value.real());
+    }
+
+    const target_kernels& kernels_;
+    const model_parameters& m_;
+    const variance_curve& curve_;
+    std::span<const complex> u_;
+    std::span<const double> maturities_;
+    transform_options options_;
+    bool closed_form_;
+    std::vector<double> bounds_;
+};
+
+// Maturities in any order, repetitions allowed.
 inline transform_result log_transform(const target_kernels& kernels, const model_parameters& m,
                                       const variance_curve& curve,
                                       std::span<const std::complex<double>> u,
                                       std::span<const double> maturities,
                                       const transform_options& options) {
-    using complex = std::complex<double>;
-    const std::size_t n = u.size();
+    std::vector<double> ascending(maturities.begin(), maturities.end());
+    std::sort(ascending.begin(), ascending.end());
+    ascending.erase(std::unique(ascending.begin(), ascending.end()), ascending.end());
+    transform_request request(kernels, m, curve, u, ascending, options);
+    request.run();
+    if (std::equal(maturities.begin(), maturities.end(), ascending.begin(), ascending.end()))
+        return std::move(request.result);
     transform_result result;
-    result.values.resize(maturities.size() * n);
-    result.errors.assign(maturities.size() * n, 0.0);
-    const bool closed_form = options.method == scheme::automatic && m.hurst == 0.5;
-
-    std::map<double, double> moments;  // Im u -> phi(i Im u), the scale of the tolerance
-    for (const auto& z : u) moments[z.imag()] = 1.0;
-
-    std::vector<complex> basis(curve.basis_size());
-    auto classical = [&](complex z, double maturity) {
-        classical_basis(m, curve, z, maturity, basis.data());
-        complex sum = 0.0;
-        const bool driven = curve.form == curve_form::driven;
-        if (driven) sum += curve.initial * basis[0];
-        for (std::size_t k = 0; k < curve.levels.size(); ++k)
-            sum += curve.levels[k] * basis[k + driven];
-        return sum;
-    };
-
-    // A value good to a few digits, for scales.
-    auto estimate = [&](complex z, double maturity) {
-        if (closed_form) return classical(z, maturity);
-        complex value;
-        solve_adams(kernels, m, {&z, 1}, maturity, adams_first_steps,
-                    uniform_functional(curve, m.mean_reversion, maturity, adams_first_steps, false),
-                    {&value, 1});
-        return value;
-    };
-
-    for (std::size_t t = 0; t < maturities.size(); ++t) {
-        const double maturity = maturities[t];
-        const std::span<complex> values(result.values.data() + t * n, n);
-        const std::span<double> errors(result.errors.data() + t * n, n);
-        for (auto& [y, scale] : moments) {
-            require_finite_moment(m, -y, maturity);
-            if (y != 0.0 && y != -1.0)  // E[1] = E[exp X] = 1
-                scale = std::exp(estimate({0.0, y}, maturity).real());
-        }
-        std::vector<double> bounds(n);
-        for (std::size_t i = 0; i < n; ++i) bounds[i] = options.tolerance * moments[u[i].imag()];
-        if (closed_form)
-            for (std::size_t i = 0; i < n; ++i) values[i] = classical(u[i], maturity);
-        else if (options.steps)
-            adams_with_error(kernels, m, curve, u, maturity, options.steps, values, errors);
-        else
-            adams_to_tolerance(kernels, m, curve, u, maturity, bounds, values, errors);
-
-        // -8 log phi(-i/2) is the total variance of the Black model with the same value there.
-        const double variance = -8.0 * estimate({0.0, -0.5}, maturity).real();
-        for (std::size_t i = 0; i < n; ++i) {
-            errors[i] += detail::rounding_error(m, u[i], values[i], variance);
-            result.worst_ratio = std::max(result.worst_ratio, errors[i] / bounds[i]);
-        }
+    result.worst_ratio = request.result.worst_ratio;
+    const auto n = static_cast<std::ptrdiff_t>(u.size());
+    for (double maturity : maturities) {
+        const auto row = std::lower_bound(ascending.begin(), ascending.end(), maturity) -
+                         ascending.begin();
+        const auto values = request.result.values.begin() + row * n;
+        const auto errors = request.result.errors.begin() + row * n;
+        result.values.insert(result.values.end(), values, values + n);
+        result.errors.insert(result.errors.end(), errors, errors + n);
     }
     return result;
 }
