@@ -16,7 +16,7 @@ class UncertifiedError(ArithmeticError):
 
 
 class Certified(NamedTuple):
-    """A value and a bound of its absolute error.
+    """A value and a bound of its absolute error, by agreement and not by proof.
 
     Attributes
     ----------
