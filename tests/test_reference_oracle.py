@@ -91,7 +91,7 @@ CURVES = [
 @pytest.mark.parametrize("maturity", [0.15, 1.0])
 def test_half_is_the_classical_model(curve, maturity):
     model = {"vol_of_vol": 0.6, "correlation": -0.7, "mean_reversion": 1.0}
-    for u in (0.4, 5.0, 30.0, 12.0 - 0.5j):
+    for u in (0.4, 5.0, 20.0, 12.0 - 0.5j):
         value, error = oracle.log_transform(u, maturity, hurst=0.5, **model, **curve)
         expected = classical.log_transform(u, maturity, **model, **curve)[0]
         assert complex(value) == pytest.approx(expected, rel=1e-12)
@@ -116,8 +116,8 @@ def test_the_bound_covers_the_error():
 
 
 def test_refuses_what_it_cannot_certify():
-    with pytest.raises(oracle.UncertifiedError, match="terms vouch for"):
-        oracle.log_transform_spot(2000.0, 10.0, **SPOT)
+    with pytest.raises(oracle.UncertifiedError, match="60 terms vouch for"):
+        oracle.log_transform_spot(2000.0, 10.0, **SPOT, terms=60)
 
 
 @pytest.mark.parametrize(
@@ -131,14 +131,14 @@ def test_refuses_what_it_cannot_certify():
     ],
 )
 def test_rough_prices_in_both_conventions(vol_of_vol, calls):
-    # The trapezoidal sum is squared in accuracy by its last halving: 6 digits asked, 10 obtained.
+    # The certificates are cautious: of 6 and 8 digits asked, 10 are obtained.
     spot = SPOT | {"vol_of_vol": vol_of_vol}
     results = oracle.price_single_integral(
-        lambda z: oracle.log_transform_spot(z, 1.0, **spot, digits=10).value,
+        lambda z: oracle.log_transform_spot(z, 1.0, **spot, digits=8).value,
         [0.8, 0.9, 1.0, 1.1, 1.2],
         digits=6,
     )
-    np.testing.assert_allclose([float(r.value) for r in results], calls, rtol=0, atol=1e-9)
+    np.testing.assert_allclose([float(r.value) for r in results], calls, rtol=0, atol=2e-10)
     assert all(r.error < 1e-6 for r in results)
 
 

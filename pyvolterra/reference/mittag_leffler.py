@@ -68,9 +68,10 @@ def _asymptotic(mp: Any, z: float, alpha: float, beta: float, digits: int) -> An
             total -= x**-k * mp.rgamma(b - a * k)
             k += 1
             # |1/Gamma(b - ak)| <= Gamma(ak + 1 - b)/pi bounds the terms without their zeros.
-            size = abs(x) ** -k * abs(mp.gamma(a * k + 1 - b)) / mp.pi
-            if a * k > b and size < mp.mpf(10) ** (-digits - 2) * abs(total):
-                return total
+            if a * k > b:
+                size = abs(x) ** -k * mp.gamma(a * k + 1 - b) / mp.pi
+                if size < mp.mpf(10) ** (-digits - 2) * abs(total):
+                    return total
 
 
 def mean_variance(
