@@ -332,7 +332,7 @@ class _Problem:
         volatility = black.implied_volatility(
             prices, 1.0, ratio, s.maturity, call=s.is_call, errors="nan"
         )
-        return np.nan_to_num(np.asarray(volatility), nan=0.0)
+        return np.where(np.isnan(volatility), 0.0, volatility)
 
     def forward_tangents(self, model: VolterraHeston, forwards: Any) -> NDArray[np.float64]:
         """Change of the residuals with each expiry's forward, times the forward's own error."""

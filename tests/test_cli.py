@@ -279,6 +279,7 @@ def test_no_progress_without_a_terminal():
     assert plain.getvalue() == ""
 
 
+@pytest.mark.filterwarnings("default")
 def test_warnings_are_one_line_without_a_path(quotes, ready_fit, tmp_path, monkeypatch, capsys):
     import warnings
 

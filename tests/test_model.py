@@ -160,8 +160,11 @@ def test_error_estimate_bounds_the_true_error():
             for z in u
         ]
     )
-    requests = [(scheme, 10.0**-k) for scheme, most in (("adams", 6), ("graded", 12))
-                for k in range(3, most + 1)]
+    requests = [
+        (scheme, 10.0**-k)
+        for scheme, most in (("adams", 6), ("graded", 12))
+        for k in range(3, most + 1)
+    ]
     for scheme, tolerance in requests:
         value, info = model.characteristic_function(
             u, 0.5, tolerance=tolerance, scheme=scheme, full_output=True

@@ -19,7 +19,6 @@ from pyvolterra.report import figures, files, render_report, slices, write_repor
 # The arbitrage check of a fit may say that it was a little less accurate than it aimed for.
 
 
-
 @pytest.fixture(scope="module")
 def quote_file(tmp_path_factory):
     return demo.write_demo_quotes(tmp_path_factory.mktemp("demo") / "quotes.csv")
