@@ -28,7 +28,7 @@ SPOT = 4200.0
 TICK = 0.05
 SEED = 20310513
 # Noise of a mid in half-widths: quotes are wider than they are uncertain.
-NOISE = 0.25
+NOISE = 0.4
 
 HURST, VOL_OF_VOL, CORRELATION, INITIAL_VARIANCE = 0.11, 0.36, -0.68, 0.021
 DRIVE = (0.034, 0.021, 0.026, 0.019, 0.014, 0.016, 0.011, 0.012, 0.008, 0.009, 0.007, 0.006, 0.006)
