@@ -5,6 +5,15 @@ Model prices can mislead: see the cautions in the README before relying on any n
 
 from typing import TYPE_CHECKING, Any
 
+try:
+    from . import _core as _core
+except ImportError as error:  # a source checkout on the path hides the installed package
+    raise ImportError(
+        f"the compiled core of pyvolterra could not be loaded from {__path__[0]} ({error}); "
+        "in a source checkout run `pip install .` and start Python from another folder, or build "
+        "in place with `python setup.py build_ext --inplace`"
+    ) from error
+
 from . import black
 from ._version import __version__
 from .errors import AccuracyWarning, MissingDependencyError, MomentExplosionError, QuoteError

@@ -40,7 +40,7 @@ def ready_fit(small_fit, monkeypatch):
 
 def run(*words):
     return subprocess.run(
-        [sys.executable, "-m", "pyvolterra", *map(str, words)],
+        [sys.executable, "-P", "-m", "pyvolterra", *map(str, words)],
         capture_output=True,
         text=True,
         timeout=300,
@@ -231,7 +231,7 @@ def test_interrupted_in_the_fit(quotes, tmp_path, monkeypatch, capsys):
 
 
 def test_interrupted_by_a_signal(tmp_path):
-    words = [sys.executable, "-m", "pyvolterra", "demo", "--out", str(tmp_path / "out")]
+    words = [sys.executable, "-P", "-m", "pyvolterra", "demo", "--out", str(tmp_path / "out")]
     with subprocess.Popen(
         words, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
     ) as process:
@@ -297,5 +297,5 @@ def test_importing_the_command_line_is_light():
         "import sys, pyvolterra.cli; "
         "print([m for m in ('matplotlib', 'pandas', 'scipy', 'rich') if m in sys.modules])"
     )
-    shown = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True)
+    shown = subprocess.run([sys.executable, "-P", "-c", code], capture_output=True, text=True)
     assert shown.stdout.strip() == "[]", shown.stderr

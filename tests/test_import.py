@@ -12,7 +12,7 @@ def test_import_brings_no_heavy_package():
         "heavy = {'matplotlib', 'pandas', 'pyarrow', 'rich', 'scipy.optimize'} & set(sys.modules)\n"
         "assert not heavy, heavy\n"
     )
-    subprocess.run([sys.executable, "-c", code], check=True)
+    subprocess.run([sys.executable, "-P", "-c", code], check=True)
 
 
 @pytest.mark.parametrize("name", ["calibrate", "Fit"])

@@ -299,6 +299,6 @@ def test_csv_needs_no_desk_package(tmp_path):
         "print({'pandas', 'pyarrow'} & set(sys.modules))"
     )
     result = subprocess.run(
-        [sys.executable, "-c", code, str(path)], capture_output=True, text=True, check=True
+        [sys.executable, "-P", "-c", code, str(path)], capture_output=True, text=True, check=True
     )
     assert result.stdout.strip() == "set()"
