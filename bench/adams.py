@@ -63,7 +63,9 @@ def peak_memory(count: int, steps: int) -> float:
         f"run(u, {steps})\n"
         "print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - before)\n"
     )
-    out = subprocess.run([sys.executable, "-c", code], check=True, capture_output=True, text=True)
+    out = subprocess.run(
+        [sys.executable, "-P", "-c", code], check=True, capture_output=True, text=True
+    )
     return int(out.stdout) / 1024.0
 
 
@@ -110,25 +112,12 @@ def main() -> None:
                 f"{1e6 * slow / COUNT:>15.3f} {ratio:>7.1f} {GOAL.get(name, 0):>5.0f} "
                 f"{difference:>11.1e}"
             )
-    print("\nmemory a transform adds to a fresh process (MiB):")
+    print("\nmemory that a transform adds to a fresh process, against a history kept for every u:")
     memory = []
-    for steps in STEPS:
-        cells = {count: peak_memory(count, steps) for count in (COUNT, 16 * COUNT)}
-        history = 16.0 * cells_per_block() * (steps + 1) / 2**20
-        memory.append(
-            {
-                "steps": steps,
-                "block_history_mib": history,
-                "all_u_history_mib": 16.0 * 16 * COUNT * (steps + 1) / 2**20,
-                **{f"added_mib_{count}_u": value for count, value in cells.items()},
-            }
-        )
-        print(
-            f"{steps:>6} steps: "
-            + ", ".join(f"{v:.2f} for {c} u" for c, v in cells.items())
-            + f"; history of one block {history:.2f}, "
-            f"of all {16 * COUNT} u it would be {16.0 * 16 * COUNT * (steps + 1) / 2**20:.0f}"
-        )
+    for steps, count in ((500, COUNT), (500, 256 * COUNT), (1000, 256 * COUNT)):
+        added, all_u = peak_memory(count, steps), 16.0 * count * (steps + 1) / 2**20
+        memory.append({"steps": steps, "u": count, "added_mib": added, "all_u_mib": all_u})
+        print(f"{steps:>6} steps, {count:>6} u: {added:>6.1f} MiB against {all_u:>7.1f}")
     if arguments.json:
         arguments.json.parent.mkdir(parents=True, exist_ok=True)
         report = {
@@ -139,10 +128,6 @@ def main() -> None:
             "peak_rss_mib": resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024.0,
         }
         arguments.json.write_text(json.dumps(report, indent=1) + "\n")
-
-
-def cells_per_block() -> int:
-    return int(_core.build_info()["adams_lanes"])
 
 
 if __name__ == "__main__":
