@@ -21,6 +21,7 @@ from .forward_variance import ForwardVariance
 from .kernels import ConstantKernel, FractionalKernel
 from .model import TransformInfo, VolterraHeston
 from .quotes import Quotes, read_quotes
+from .threads import default_threads, set_default_threads
 
 if TYPE_CHECKING:
     from .calibration import Fit, calibrate
@@ -40,7 +41,9 @@ __all__ = [
     "__version__",
     "black",
     "calibrate",
+    "default_threads",
     "read_quotes",
+    "set_default_threads",
 ]
 
 

@@ -20,6 +20,7 @@ def log_transform(
     scheme: str,
     steps: int,
     tolerance: float,
+    threads: int = 1,
 ) -> tuple[_Complexes, _Floats, float]: ...
 def adams_solution(
     model: _Model, u: _Complexes, horizon: float, steps: int, instruction_set: str = ""

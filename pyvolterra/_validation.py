@@ -19,6 +19,15 @@ def finite_number(value: object, name: str) -> float:
     return number
 
 
+def positive_integer(value: object, name: str) -> int:
+    """An integer of at least 1."""
+    if isinstance(value, (bool, np.bool_)) or not isinstance(value, (int, np.integer)):
+        raise TypeError(f"{name} must be an integer, got {type(value).__name__}")
+    if value < 1:
+        raise ValueError(f"{name} must be at least 1, got {value}")
+    return int(value)
+
+
 def _as_array(value: object, name: str, dtype: type) -> NDArray[Any]:
     array = np.asarray(value)
     allowed = "iufc" if dtype is complex else "iuf"

@@ -78,6 +78,7 @@ def _fit(options: argparse.Namespace) -> int:
 
 def _info(options: argparse.Namespace) -> int:
     from . import _core
+    from .threads import default_threads
 
     build = _core.build_info()
     rows = {
@@ -86,8 +87,7 @@ def _info(options: argparse.Namespace) -> int:
         "numpy": np.__version__,
         "platform": f"{platform.system()} {platform.machine()}",
     }
-    # The compiled core works on the calling thread unless it says otherwise.
-    for name, value in (build | {"threads": build.get("threads", 1)}).items():
+    for name, value in (build | {"threads": default_threads()}).items():
         shown = ", ".join(map(str, value)) if isinstance(value, (list, tuple)) else str(value)
         rows[name.replace("_", " ")] = shown
     for name, value in rows.items():

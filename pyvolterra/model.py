@@ -10,10 +10,17 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from . import _core, black
-from ._validation import finite_complex, finite_number, finite_reals, require
+from ._validation import (
+    finite_complex,
+    finite_number,
+    finite_reals,
+    positive_integer,
+    require,
+)
 from .errors import AccuracyWarning
 from .forward_variance import ForwardVariance
 from .kernels import Kernel
+from .threads import default_threads
 
 SCHEMES = ("auto", "graded", "adams")
 
@@ -184,6 +191,7 @@ class VolterraHeston:
         tolerance: float = 1e-8,
         scheme: str = "auto",
         steps: int | None = None,
+        threads: int | None = None,
         full_output: bool = False,
     ) -> Any:
         r"""log E[exp(iuX_T)], continuous in u and zero at u = 0.
@@ -205,6 +213,9 @@ class VolterraHeston:
         steps : int, optional
             With ``scheme="adams"``: exactly this many steps to each maturity, whatever the
             tolerance.
+        threads : int, optional
+            At most this many threads; :func:`pyvolterra.default_threads` if not given. The values
+            are the same bit for bit for any number.
         full_output : bool, default False
             Return ``(values, info)`` with a :class:`TransformInfo`.
 
@@ -246,15 +257,10 @@ class VolterraHeston:
             raise ValueError(f"tolerance must be positive, got {bound}")
         if scheme not in SCHEMES:
             raise ValueError(f"scheme must be one of {', '.join(SCHEMES)}, got {scheme!r}")
-        count = 0
-        if steps is not None:
-            if isinstance(steps, bool) or not isinstance(steps, (int, np.integer)):
-                raise TypeError(f"steps must be an integer, got {type(steps).__name__}")
-            if scheme != "adams":
-                raise ValueError("steps needs scheme='adams'")
-            if steps < 1:
-                raise ValueError(f"steps must be at least 1, got {steps}")
-            count = int(steps)
+        if steps is not None and scheme != "adams":
+            raise ValueError("steps needs scheme='adams'")
+        count = 0 if steps is None else positive_integer(steps, "steps")
+        workers = default_threads() if threads is None else positive_integer(threads, "threads")
         values, errors, worst = _core.log_transform(
             self._core_model,
             self.forward_variance._arguments,
@@ -263,6 +269,7 @@ class VolterraHeston:
             scheme,
             count,
             bound,
+            workers,
         )
         if worst > 1.0 and steps is None:
             warnings.warn(
@@ -287,13 +294,20 @@ class VolterraHeston:
         tolerance: float = 1e-8,
         scheme: str = "auto",
         steps: int | None = None,
+        threads: int | None = None,
         full_output: bool = False,
     ) -> Any:
         """E[exp(iuX_T)]; arguments, shapes, errors and accuracy as in
         :meth:`log_characteristic_function`.
         """
         values, info = self.log_characteristic_function(
-            u, maturities, tolerance=tolerance, scheme=scheme, steps=steps, full_output=True
+            u,
+            maturities,
+            tolerance=tolerance,
+            scheme=scheme,
+            steps=steps,
+            threads=threads,
+            full_output=True,
         )
         result = np.exp(values)
         if np.ndim(result) == 0:

@@ -22,12 +22,12 @@ const target_kernels& to_kernels(const std::string& instruction_set) {
 
 py::tuple transform(const py::tuple& model, const py::tuple& curve, const py::array& u,
                     const py::array& maturities, const std::string& method, std::size_t steps,
-                    double tolerance) {
+                    double tolerance, std::size_t threads) {
     const auto m = to_model(model);
     const auto c = to_curve(curve);
     const auto nodes = input<complex>(u, "u");
     const auto times = input<double>(maturities, "maturities");
-    const transform_options options{to_scheme(method), steps, tolerance};
+    const transform_options options{to_scheme(method), steps, tolerance, threads};
     transform_result result;
     {
         py::gil_scoped_release release;  // safe: only C++ copies and arrays held by the caller
@@ -88,6 +88,7 @@ void bind_transform(py::module_& module) {
     });
     module.def("log_transform", &transform, py::arg("model"), py::arg("curve"), py::arg("u"),
                py::arg("maturities"), py::arg("scheme"), py::arg("steps"), py::arg("tolerance"),
+               py::arg("threads") = 1,
                "(values, errors, worst error/tolerance): log E[exp(iuX_T)], maturities x u.");
     module.def("adams_solution", &adams_solution, py::arg("model"), py::arg("u"),
                py::arg("horizon"), py::arg("steps"), py::arg("instruction_set") = "",

@@ -2,6 +2,7 @@
 #pragma once
 
 #include <algorithm>
+#include <atomic>
 #include <cmath>
 #include <complex>
 #include <cstddef>
@@ -15,6 +16,7 @@
 #include "volterra/explosion.hpp"
 #include "volterra/graded_transform.hpp"
 #include "volterra/model.hpp"
+#include "volterra/parallel.hpp"
 
 namespace volterra {
 
@@ -25,6 +27,7 @@ struct transform_options {
     scheme method = scheme::automatic;
     std::size_t steps = 0;     // adams: exactly this many steps to each maturity; 0: by tolerance
     double tolerance = 1e-8;   // bound on |error of phi(u)| / phi(i Im u)
+    std::size_t threads = 1;
 };
 
 struct transform_result {
@@ -165,7 +168,8 @@ private:
     std::vector<double> bounds_;
 };
 
-// Maturities in any order, repetitions allowed.
+// Maturities in any order, repetitions allowed. With more than one thread the u are shared out;
+// as no value depends on its companions, the bits are the same for any number of threads.
 inline transform_result log_transform(const target_kernels& kernels, const model_parameters& m,
                                       const variance_curve& curve,
                                       std::span<const std::complex<double>> u,
@@ -174,21 +178,31 @@ inline transform_result log_transform(const target_kernels& kernels, const model
     std::vector<double> ascending(maturities.begin(), maturities.end());
     std::sort(ascending.begin(), ascending.end());
     ascending.erase(std::unique(ascending.begin(), ascending.end()), ascending.end());
-    transform_request request(kernels, m, curve, u, ascending, options);
-    request.run();
-    if (std::equal(maturities.begin(), maturities.end(), ascending.begin(), ascending.end()))
-        return std::move(request.result);
+    std::vector<std::size_t> rows;  // of each requested maturity among the ascending ones
+    for (double maturity : maturities)
+        rows.push_back(static_cast<std::size_t>(
+            std::lower_bound(ascending.begin(), ascending.end(), maturity) - ascending.begin()));
+
+    const std::size_t n = u.size();
     transform_result result;
-    result.worst_ratio = request.result.worst_ratio;
-    const auto n = static_cast<std::ptrdiff_t>(u.size());
-    for (double maturity : maturities) {
-        const auto row = std::lower_bound(ascending.begin(), ascending.end(), maturity) -
-                         ascending.begin();
-        const auto values = request.result.values.begin() + row * n;
-        const auto errors = request.result.errors.begin() + row * n;
-        result.values.insert(result.values.end(), values, values + n);
-        result.errors.insert(result.errors.end(), errors, errors + n);
-    }
+    result.values.resize(maturities.size() * n);
+    result.errors.resize(maturities.size() * n);
+    std::atomic<double> worst{0.0};
+    constexpr std::size_t least = 64;  // u: below that a thread costs more than it saves
+    for_each_part(n, options.threads, least, [&](std::size_t begin, std::size_t end) {
+        transform_request request(kernels, m, curve, u.subspan(begin, end - begin), ascending,
+                                  options);
+        request.run();
+        const auto& part = request.result;
+        for (std::size_t t = 0; t < rows.size(); ++t) {
+            const std::size_t from = rows[t] * (end - begin), to = t * n + begin;
+            std::copy_n(part.values.data() + from, end - begin, result.values.data() + to);
+            std::copy_n(part.errors.data() + from, end - begin, result.errors.data() + to);
+        }
+        for (double seen = worst; seen < part.worst_ratio;)
+            if (worst.compare_exchange_weak(seen, part.worst_ratio)) break;
+    });
+    result.worst_ratio = worst;
     return result;
 }
 
