@@ -1,47 +1,36 @@
-"""Pictures of a fit, as PNG bytes.
+"""Pictures of a fit, as PNG bytes."""
 
-Every function builds its own matplotlib ``Figure`` on an Agg canvas: no pyplot, no global state,
-no display needed. Colours are told apart with any common colour-vision deficiency and in grey.
-"""
-
-import io
 import math
-from collections.abc import Sequence
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
 from ..fit import Fit
-from .slices import ExpirySlice, curve_errors, market_skew, model_skew, price_decimals
-
-if TYPE_CHECKING:
-    from matplotlib.axes import Axes
-    from matplotlib.figure import Figure
-
-INK = "#1c2733"  # text
-MUTED = "#66727e"  # secondary text, axes
-RULE = "#e3e7ea"  # grid
-QUOTE = "#8793a0"  # bid-ask bars
-MODEL = "#0f5394"  # model line
-ALERT = "#c2470a"  # model outside bid and ask
-GUIDE = "#9a7400"  # guides
-BAND = "#dbe7f2"  # uncertainty
-
-DPI = 160
-_TIME_TICKS = (
-    (1 / 365, "1d"),
-    (7 / 365, "1w"),
-    (1 / 12, "1m"),
-    (0.25, "3m"),
-    (0.5, "6m"),
-    (1.0, "1y"),
-    (2.0, "2y"),
-    (3.0, "3y"),
-    (5.0, "5y"),
-    (10.0, "10y"),
-    (20.0, "20y"),
+from .canvas import (
+    ALERT,
+    BAND,
+    GUIDE,
+    INK,
+    MODEL,
+    MUTED,
+    QUOTE,
+    bars,
+    cap_width,
+    heading,
+    legend,
+    log_grid,
+    new_figure,
+    padded,
+    plain_log_ticks,
+    png,
+    residual_axes,
+    right_text,
+    single,
+    smile_key,
+    time_axis,
+    volatility_range,
 )
+from .slices import ExpirySlice, curve_errors, market_skew, model_skew, price_decimals
 
 
 def smile_picture(fit_slice: ExpirySlice) -> bytes:
@@ -49,22 +38,22 @@ def smile_picture(fit_slice: ExpirySlice) -> bytes:
     from matplotlib.ticker import MaxNLocator
 
     s = fit_slice
-    figure = _figure(5.8, 4.7)
+    figure = new_figure(5.8, 4.7)
     grid = figure.add_gridspec(
         2, 1, height_ratios=(3.4, 1.0), hspace=0.08, left=0.122, right=0.975, top=0.815, bottom=0.11
     )
     top, below = figure.add_subplot(grid[0]), figure.add_subplot(grid[1])
     x = 100.0 * s.log_moneyness
-    _bars(top, x, s, width=1.6, cap=_cap_width(x))
+    bars(top, x, s, width=1.6, cap=cap_width(x))
     top.plot(100.0 * s.curve_log_moneyness, 100.0 * s.curve, color=MODEL, lw=1.9, zorder=3)
-    top.set_ylim(*_volatility_range([s]))
+    top.set_ylim(*volatility_range([s]))
     top.axvline(0.0, color=MUTED, lw=0.8, ls=(0, (2, 3)), zorder=1)
     top.set_ylabel("implied volatility (%)")
     top.yaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5, 10]))
     top.tick_params(labelbottom=False)
-    _key(figure, _smile_key(not s.inside.all()), 0.67, 4.7 - 0.73)
+    legend(figure, smile_key(not s.inside.all()), 0.67, 4.7 - 0.73)
 
-    _residual_axes(below)
+    residual_axes(below)
     shown = np.clip(s.half_widths, -2.7, 2.7)
     colour = np.where(s.inside, MODEL, ALERT)
     below.vlines(x, 0.0, shown, color=colour, lw=1.3, zorder=2)
@@ -78,10 +67,10 @@ def smile_picture(fit_slice: ExpirySlice) -> bytes:
     below.set_xlabel("log-moneyness ln(K/F) (%)")
     below.set_ylabel("model − mid\n(half-widths)", fontsize=8.5)
     for axes in (top, below):
-        axes.set_xlim(_padded(np.append(x, 0.0), 0.03))
+        axes.set_xlim(padded(np.append(x, 0.0), 0.03))
     figure.align_ylabels([top, below])
     figure.text(0.02, 0.944, s.label, fontsize=13, fontweight="bold", color=INK)
-    _right_text(
+    right_text(
         figure,
         0.944,
         f"{s.days:.1f} days" if s.days < 2.0 else f"{s.days:,.0f} days",
@@ -95,7 +84,7 @@ def smile_picture(fit_slice: ExpirySlice) -> bytes:
         fontsize=9.5,
         color=MUTED,
     )
-    return _png(figure)
+    return png(figure)
 
 
 def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> bytes:
@@ -103,7 +92,7 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
     columns = min(columns, len(slices))
     rows = math.ceil(len(slices) / columns)
     width = 2.55 * columns + 0.6 if columns > 2 else 4.6
-    figure = _figure(width, 1.95 * rows + 0.88)
+    figure = new_figure(width, 1.95 * rows + 0.88)
     height = figure.get_figheight()
     grid = figure.add_gridspec(
         rows,
@@ -116,8 +105,8 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
         hspace=0.10,
     )
     z = [s.standardise(s.log_moneyness) for s in slices]
-    x_limits = _padded(np.concatenate(z), 0.04)
-    low, high = _volatility_range(slices)
+    x_limits = padded(np.concatenate(z), 0.04)
+    low, high = volatility_range(slices)
     # The labels stand in the upper right quarter: room for them above the right wings.
     right = [low]
     for s, zs in zip(slices, z, strict=True):
@@ -126,7 +115,7 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
     y_limits = (low, max(high, low + (max(right) - low) / 0.70))
     for i, s in enumerate(slices):
         axes = figure.add_subplot(grid[i // columns, i % columns])
-        _bars(axes, z[i], s, width=1.1, cap=0.0)
+        bars(axes, z[i], s, width=1.1, cap=0.0)
         axes.plot(
             s.standardise(s.curve_log_moneyness), 100.0 * s.curve, color=MODEL, lw=1.2, zorder=3
         )
@@ -145,8 +134,8 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
     text: dict[str, Any] = {"fontsize": 10, "color": INK}
     figure.text(0.5, 0.08 / height, x_label, ha="center", **text)
     figure.text(0.06 / width, 0.5, "implied volatility (%)", va="center", rotation=90, **text)
-    _key(figure, _smile_key(any(not s.inside.all() for s in slices)), 0.62, height - 0.17)
-    return _png(figure)
+    legend(figure, smile_key(any(not s.inside.all() for s in slices)), 0.62, height - 0.17)
+    return png(figure)
 
 
 def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
@@ -156,7 +145,7 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
 
     count = len(slices)
     height = 1.75 + 0.26 * max(count, 3)
-    figure = _figure(6.2, height)
+    figure = new_figure(6.2, height)
     grid = figure.add_gridspec(
         1,
         2,
@@ -203,7 +192,7 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     bars.set_title("inside bid–ask", fontsize=9, color=MUTED, pad=4)
     for panel in (axes, bars):
         panel.set_ylim(max(count, 3) - 0.5, -0.5)
-    _title(figure, height, "Model against bid and ask")
+    heading(figure, height, "Model against bid and ask")
     figure.text(0.02, 1.0 - 0.665 / height, "model at", va="center", fontsize=9, color=INK)
     strip = figure.add_axes((0.165, 1.0 - 0.72 / height, 0.26, 0.11 / height))
     strip.imshow(np.linspace(-2.0, 2.0, 256)[None, :], aspect="auto", cmap=palette)
@@ -212,21 +201,21 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     strip.tick_params(length=0, pad=1.5, labelsize=8.5)
     strip.spines[:].set_visible(False)
     ring = Line2D([], [], marker="o", ls="", mfc="white", mec=INK, mew=1.1, ms=5.8)
-    _key(figure, [(ring, "model outside bid–ask")], 2.85, height - 0.665)
-    return _png(figure)
+    legend(figure, [(ring, "model outside bid–ask")], 2.85, height - 0.665)
+    return png(figure)
 
 
 def skew_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> bytes:
     """At-the-money skew against maturity on logarithmic axes."""
     market = market_skew(fit.model, slices)
-    times = _log_grid(np.array([s.maturity for s in slices]), 40)
+    times = log_grid(np.array([s.maturity for s in slices]), 40)
     skew = model_skew(fit.model, times)
     signs = np.sign(np.concatenate([market.market, skew[np.isfinite(skew)]]))
     falling = bool(np.all(signs <= 0.0))
     # Without correlation the model has no skew: nothing to draw on a log axis but rounding.
     model = np.where(np.abs(skew) > 1e-5, np.abs(skew), np.nan)
     size = np.abs(market.market)
-    figure, axes = _single()
+    figure, axes = single()
     axes.set_xscale("log")
     axes.set_yscale("log")
     key: list[tuple[Any, str]] = []
@@ -256,24 +245,24 @@ def skew_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> bytes:
         guide = model[first] * (times / times[first]) ** (hurst - 0.5)
         line = axes.plot(times, guide, color=GUIDE, lw=1.4, ls=(0, (5, 3)), zorder=2)[0]
         key.append((line, f"slope H − 1/2 = −{0.5 - hurst:.2f}"))
-    _time_axis(axes, times, "time to expiry")
-    _plain_log_ticks(axes, np.concatenate([model[drawn], size[size > 0.0]]))
+    time_axis(axes, times, "time to expiry")
+    plain_log_ticks(axes, np.concatenate([model[drawn], size[size > 0.0]]))
     name = "−∂σ/∂ ln K" if falling else "|∂σ/∂ ln K|"
     axes.set_ylabel(f"{name} at the forward\n(volatility points per 1 % of ln K)", fontsize=9)
-    _title(figure, figure.get_figheight(), "At-the-money skew")
-    _key(figure, key, 0.78, figure.get_figheight() - 0.53)
-    return _png(figure)
+    heading(figure, figure.get_figheight(), "At-the-money skew")
+    legend(figure, key, 0.78, figure.get_figheight() - 0.53)
+    return png(figure)
 
 
 def forward_volatility_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> bytes:
     """Forward variance curve, drawn as volatility, and its average to each maturity."""
     maturities = np.array([s.maturity for s in slices])
-    times = _log_grid(maturities, 240, first=1.0 / 365.0)
+    times = log_grid(maturities, 240, first=1.0 / 365.0)
     xi = fit.model.forward_variance(times)
     average = np.sqrt(fit.model.forward_variance.total_variance(times) / times)
     volatility = np.sqrt(np.maximum(xi, 0.0))
     error = curve_errors(fit, times)
-    figure, axes = _single()
+    figure, axes = single()
     axes.set_xscale("log")
     low, high = (100.0 * np.sqrt(np.maximum(xi + k * error, 0.0)) for k in (-2.0, 2.0))
     band = axes.fill_between(times, low, high, color=BAND, lw=0, zorder=1)
@@ -283,195 +272,16 @@ def forward_volatility_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> byt
     foot: dict[str, Any] = {"transform": axes.get_xaxis_transform(), "clip_on": False}
     expiries = axes.plot(maturities, 0.0 * maturities, "|", color=INK, ms=7, **foot)[0]
     # The band may be wide where the curve is free: it does not set the scale.
-    bottom, top = _padded(100.0 * np.concatenate([volatility, average]), 0.25)
+    bottom, top = padded(100.0 * np.concatenate([volatility, average]), 0.25)
     axes.set_ylim(max(bottom, 0.0), top)
-    _time_axis(axes, times, "time t from now")
+    time_axis(axes, times, "time t from now")
     axes.set_ylabel("annualised volatility (%)")
-    _title(figure, figure.get_figheight(), "Forward variance ξ(t), as volatility")
+    heading(figure, figure.get_figheight(), "Forward variance ξ(t), as volatility")
     key: list[tuple[Any, str]] = [
         (forward, "forward √ξ(t)"),
         (band, "± 2 s.e."),
         (mean, "average to t"),
         (expiries, "expiries"),
     ]
-    _key(figure, key, 0.78, figure.get_figheight() - 0.53)
-    return _png(figure)
-
-
-def _figure(width: float, height: float) -> "Figure":
-    from matplotlib.backends.backend_agg import FigureCanvasAgg
-    from matplotlib.figure import Figure
-
-    figure = Figure(figsize=(width, height), dpi=DPI, facecolor="white")
-    FigureCanvasAgg(figure)
-    return figure
-
-
-def _single() -> tuple["Figure", "Axes"]:
-    figure = _figure(5.8, 4.1)
-    axes = figure.add_axes((0.135, 0.125, 0.84, 0.70))
-    return figure, axes
-
-
-def _png(figure: "Figure") -> bytes:
-    for axes in figure.axes:
-        _dress(axes)
-    buffer = io.BytesIO()
-    # No software tag or date: the same fit gives the same bytes.
-    figure.savefig(buffer, format="png", dpi=DPI, metadata={"Software": None})
-    return buffer.getvalue()
-
-
-def _dress(axes: "Axes") -> None:
-    axes.set_axisbelow(True)
-    for side in ("top", "right"):
-        axes.spines[side].set_visible(False)
-    for side in ("left", "bottom"):
-        axes.spines[side].set_color("#b5bdc5")
-    axes.tick_params(which="both", color="#b5bdc5", labelcolor=INK)
-    axes.xaxis.label.set_color(INK)
-    axes.yaxis.label.set_color(INK)
-    if axes.images or not axes.axison:
-        return
-    if axes.xaxis.get_ticklocs().size:
-        axes.grid(True, axis="both", color=RULE, lw=0.7, zorder=0)
-
-
-def _bars(axes: "Axes", x: NDArray[np.float64], s: ExpirySlice, width: float, cap: float) -> None:
-    low = 100.0 * np.nan_to_num(s.bid, nan=0.0)
-    for mask, colour in ((s.inside, QUOTE), (~s.inside, ALERT)):
-        axes.vlines(x[mask], low[mask], 100.0 * s.ask[mask], color=colour, lw=width, zorder=2)
-        if cap > 0.0:
-            for edge in (low, 100.0 * s.ask):
-                axes.hlines(
-                    edge[mask], x[mask] - cap, x[mask] + cap, color=colour, lw=width, zorder=2
-                )
-
-
-def _volatility_range(slices: Sequence[ExpirySlice]) -> tuple[float, float]:
-    # A bid below intrinsic value has no volatility: its bar runs off the foot of the picture.
-    shown = np.concatenate([np.concatenate([s.bid, s.ask, s.curve]) for s in slices])
-    low, high = _padded(100.0 * shown[np.isfinite(shown)], 0.04)
-    return max(low, 0.0), high
-
-
-def _cap_width(x: NDArray[np.float64]) -> float:
-    span = float(np.ptp(x))
-    return min(0.006 * span, 0.3 * span / max(x.size, 1))
-
-
-def _residual_axes(axes: "Axes") -> None:
-    axes.axhspan(-1.0, 1.0, color="#eef1f3", lw=0, zorder=0)
-    axes.axhline(0.0, color=MUTED, lw=0.8, zorder=1)
-    axes.set_ylim(-3.0, 3.0)
-    axes.set_yticks([-2, 0, 2], ["−2", "0", "+2"])
-
-
-def _smile_key(alert: bool) -> list[tuple[Any, str]]:
-    from matplotlib.lines import Line2D
-
-    def bar(colour: str) -> Line2D:
-        return Line2D([], [], marker="|", ls="", color=colour, ms=10, mew=2.0)
-
-    key: list[tuple[Any, str]] = [(bar(QUOTE), "bid–ask")]
-    if alert:
-        key.append((bar(ALERT), "bid–ask, model outside"))
-    return [*key, (Line2D([], [], color=MODEL, lw=1.9), "model")]
-
-
-def _key(figure: "Figure", key: list[tuple[Any, str]], x: float, y: float) -> None:
-    """Legend in one line outside the axes, where it covers no data; x and y in inches."""
-    width, height = figure.get_size_inches()
-    figure.legend(
-        [handle for handle, _ in key],
-        [text for _, text in key],
-        loc="center left",
-        bbox_to_anchor=(x / width, y / height),
-        ncols=len(key),
-        borderaxespad=0.0,
-        borderpad=0.0,
-        columnspacing=1.5,
-        handletextpad=0.45,
-        handlelength=1.7,
-        frameon=False,
-        fontsize=9,
-        labelcolor=INK,
-    )
-
-
-def _title(figure: "Figure", height: float, text: str) -> None:
-    figure.text(0.02, 1.0 - 0.30 / height, text, fontsize=13, fontweight="bold", color=INK)
-
-
-def _right_text(figure: "Figure", y: float, *parts: str) -> None:
-    figure.text(0.975, y, " · ".join(parts), ha="right", fontsize=10, color=INK)
-
-
-def _padded(values: NDArray[np.float64], share: float) -> tuple[float, float]:
-    low, high = float(np.min(values)), float(np.max(values))
-    pad = share * ((high - low) or abs(high) or 1.0)
-    return low - pad, high + pad
-
-
-def _log_grid(
-    maturities: NDArray[np.float64], points: int, first: float | None = None
-) -> NDArray[np.float64]:
-    low, high = float(maturities.min()), float(maturities.max())
-    if first is not None:
-        low = min(first, low)
-    if high / low < 1.5:
-        low, high = low / 1.5, high * 1.5
-    return np.geomspace(low, high, points)
-
-
-def _time_axis(axes: "Axes", times: NDArray[np.float64], label: str) -> None:
-    low, high = times[0] / 1.12, times[-1] * 1.12
-    ticks = [(t, text) for t, text in _TIME_TICKS if low <= t <= high]
-    if len(ticks) < 3:
-        days = (
-            1,
-            2,
-            3,
-            4,
-            5,
-            7,
-            10,
-            14,
-            20,
-            25,
-            30,
-            35,
-            40,
-            45,
-            60,
-            75,
-            90,
-            120,
-            150,
-            180,
-            240,
-            300,
-            365,
-        )
-        ticks = [(d / 365.0, f"{d}d") for d in days if low <= d / 365.0 <= high]
-    axes.set_xticks([t for t, _ in ticks], [text for _, text in ticks])
-    axes.set_xticks([], minor=True)
-    axes.set_xlim(low, high)
-    axes.set_xlabel(label)
-
-
-def _plain_log_ticks(axes: "Axes", values: NDArray[np.float64]) -> None:
-    if not values.size:
-        axes.set_yticks([], minor=True)
-        return
-    high = float(values.max()) * 1.25
-    low = max(float(values.min()) / 1.25, 1e-3 * high)
-    decades = range(math.floor(math.log10(low)), math.ceil(math.log10(high)) + 1)
-    ticks: list[float] = []
-    for steps in ((1, 2, 5), (1, 1.5, 2, 3, 4, 5, 6, 7, 8, 9)):
-        ticks = [m * 10.0**d for d in decades for m in steps if low <= m * 10.0**d <= high]
-        if len(ticks) >= 3:
-            break
-    axes.set_yticks(ticks, [f"{t:g}" for t in ticks])
-    axes.set_yticks([], minor=True)
-    axes.set_ylim(low, high)
+    legend(figure, key, 0.78, figure.get_figheight() - 0.53)
+    return png(figure)

@@ -1,16 +1,14 @@
 """The report: one HTML file that needs no network, no script and no other file."""
 
-import base64
 import math
-from collections.abc import Iterable, Sequence
-from html import escape
-from typing import Any
+from collections.abc import Sequence
 
 import numpy as np
 
 from ..cleaning import cleaning_table
 from ..fit import Fit
 from .files import versions
+from .markup import STYLE, data, figure, moment, number, section, signed, table, text
 from .slices import ExpirySlice, expiry_labels, price_decimals
 
 # Quotes set aside that are listed one by one; the table of reasons counts all of them.
@@ -70,22 +68,22 @@ def report_page(
     """
     name = fit.source or "quotes"
     parts = [
-        f"<header><p class='kind'>pyvolterra fit report</p><h1>{_text(name)}</h1>",
+        f"<header><p class='kind'>pyvolterra fit report</p><h1>{text(name)}</h1>",
         f"<p>{_fitted(fit, slices)}</p></header>",
-        _section("Result", _headline(fit) + _flags(fit, slices) + _parameters(fit)),
-        _section("The surface", _overview(pictures, slices)),
-        _section("Smile by smile", _smiles(slices, smiles)),
-        _section("Forwards and discount factors", _forwards(fit)),
-        _section("Quotes set aside", _set_aside(fit)),
-        _section("Cautions", _cautions()),
-        _section("How this was made", _origin(fit)),
+        section("Result", _headline(fit) + _flags(fit, slices) + _parameters(fit)),
+        section("The surface", _overview(pictures, slices)),
+        section("Smile by smile", _smiles(slices, smiles)),
+        section("Forwards and discount factors", _forwards(fit)),
+        section("Quotes set aside", _set_aside(fit)),
+        section("Cautions", _cautions()),
+        section("How this was made", _origin(fit)),
     ]
     html = (
         "<!doctype html>\n<html lang='en'><head><meta charset='utf-8'>"
         "<meta name='viewport' content='width=device-width, initial-scale=1'>"
         "<meta http-equiv='Content-Security-Policy' "
         "content=\"default-src 'none'; img-src data:; style-src 'unsafe-inline'\">"
-        f"<title>{_text(name)} · pyvolterra fit</title><style>{_STYLE}</style></head>\n<body><main>"
+        f"<title>{text(name)} · pyvolterra fit</title><style>{STYLE}</style></head>\n<body><main>"
         + "\n".join(parts)
         + "</main></body></html>\n"
     )
@@ -97,14 +95,14 @@ def _fitted(fit: Fit, slices: Sequence[ExpirySlice]) -> str:
     other = (
         f"; {rest} more, mostly in the money, served only to infer the forwards" if rest > 0 else ""
     )
-    first, last = _text(slices[0].label), _text(slices[-1].label)
+    first, last = text(slices[0].label), text(slices[-1].label)
     expiries = (
         f"<b>{len(slices)}</b> expiries from {first} to {last}"
         if len(slices) > 1
         else f"one expiry, {first}"
     )
     return (
-        f"Quotes of <b>{_moment(fit.quote_time)}</b>. <b>{fit.quotes_read:,}</b> quotes read, "
+        f"Quotes of <b>{moment(fit.quote_time)}</b>. <b>{fit.quotes_read:,}</b> quotes read, "
         f"<b>{fit.residuals.size:,}</b> fitted on {expiries}, "
         f"<b>{len(fit.rejections):,}</b> set aside{other}. "
         f"Model: {_model(fit)}."
@@ -138,8 +136,8 @@ def _headline(fit: Fit) -> str:
     return (
         "<div class='cards'>"
         + "".join(
-            f"<div class='card {kind}'><p>{_text(label)}</p><strong>{_text(value)}</strong>"
-            f"<span>{_text(note)}</span></div>"
+            f"<div class='card {kind}'><p>{text(label)}</p><strong>{text(value)}</strong>"
+            f"<span>{text(note)}</span></div>"
             for label, value, note, kind in cards
         )
         + "</div>"
@@ -151,27 +149,27 @@ def _flags(fit: Fit, slices: Sequence[ExpirySlice]) -> str:
     flags = []
     if not fit.converged:
         flags.append(
-            f"The optimiser stopped before converging ({_text(fit.message)}): these are the best "
+            f"The optimiser stopped before converging ({text(fit.message)}): these are the best "
             "values it saw, their standard errors mean little."
         )
     if fit.at_bound:
         flags.append(
-            f"At a bound: {_text(', '.join(fit.at_bound))}. The quotes ask for more than the model "
+            f"At a bound: {text(', '.join(fit.at_bound))}. The quotes ask for more than the model "
             "allows, or do not determine it."
         )
-    flags += [_text(f"Calendar arbitrage: {text}.") for text in fit.arbitrage.calendar[:3]]
-    flags += [_text(f"Butterfly arbitrage: {text}.") for text in fit.arbitrage.butterfly[:3]]
+    flags += [text(f"Calendar arbitrage: {found}.") for found in fit.arbitrage.calendar[:3]]
+    flags += [text(f"Butterfly arbitrage: {found}.") for found in fit.arbitrage.butterfly[:3]]
     few = [s.label for s in slices if len(s) < 8]
     if few:
-        flags.append(f"Fewer than eight quotes: {_text(', '.join(few))}.")
+        flags.append(f"Fewer than eight quotes: {text(', '.join(few))}.")
     missed = [s.label for s in slices if s.share_inside < 0.75]
     if missed:
-        flags.append(f"More than a quarter outside bid–ask: {_text(', '.join(missed))}.")
+        flags.append(f"More than a quarter outside bid–ask: {text(', '.join(missed))}.")
     if fit.quotes_read and len(fit.rejections) > 0.25 * fit.quotes_read:
         flags.append("More than a quarter of the file was set aside: look at the source first.")
     if not flags:
         return ""
-    return "<ul class='flags'>" + "".join(f"<li>{text}</li>" for text in flags) + "</ul>"
+    return "<ul class='flags'>" + "".join(f"<li>{flag}</li>" for flag in flags) + "</ul>"
 
 
 def _parameters(fit: Fit) -> str:
@@ -180,7 +178,7 @@ def _parameters(fit: Fit) -> str:
         if key == "initial_variance":
             meaning += f": a volatility of {100.0 * math.sqrt(fit.parameters[key]):.2f} % now"
         rows.append((label, *_estimate(fit, key), _status(fit, key), meaning))
-    main = _table(
+    main = table(
         ("parameter", "estimate", "± standard error", "status", "what it is"),
         rows,
         numeric=(1, 2),
@@ -193,7 +191,7 @@ def _parameters(fit: Fit) -> str:
         key = f"drive_{k + 1}"
         span = f"{ends[k]:.4f} – {'∞' if last else f'{ends[k + 1]:.4f}'}"
         drives.append((span, *_estimate(fit, key), _status(fit, key)))
-    curve = _table(("years", "level θ", "± standard error", "status"), drives, numeric=(0, 1, 2))
+    curve = table(("years", "level θ", "± standard error", "status"), drives, numeric=(0, 1, 2))
     return (
         f"{main}<details><summary>Drive of the forward-variance curve, {len(drives)} levels"
         "</summary><p class='note'>g₀(t) = V₀ + ∫ K(t − s) θ(s) ds with θ constant on each span; "
@@ -206,9 +204,9 @@ def _estimate(fit: Fit, key: str) -> tuple[str, str]:
     """Estimate and error, the estimate to the second digit of its error."""
     value, error = fit.parameters[key], fit.standard_errors.get(key, 0.0)
     if not (key in fit.covariance_names and math.isfinite(error) and error > 0.0):
-        return _number(value, 4), "–"
+        return number(value, 4), "–"
     places = min(max(1 - math.floor(math.log10(error)), 0), 10)
-    return _signed(f"{value:.{places}f}"), f"{error:.{places}f}"
+    return signed(f"{value:.{places}f}"), f"{error:.{places}f}"
 
 
 def _status(fit: Fit, key: str) -> str:
@@ -218,7 +216,7 @@ def _status(fit: Fit, key: str) -> str:
 
 
 def _overview(pictures: dict[str, bytes], slices: Sequence[ExpirySlice]) -> str:
-    wide, narrow = _data(pictures["smiles"]), _data(pictures["smiles_narrow"])
+    wide, narrow = data(pictures["smiles"]), data(pictures["smiles_narrow"])
     all_smiles = (
         f"<figure class='wide' style='max-width: {290 * min(len(slices), 4)}px'><picture>"
         f"<source media='(max-width: 700px)' srcset='{narrow}'>"
@@ -243,8 +241,8 @@ def _overview(pictures: dict[str, bytes], slices: Sequence[ExpirySlice]) -> str:
     return (
         all_smiles
         + "<div class='pictures'>"
-        + "".join(_figure(pictures[key], alt, caption) for key, alt, caption in rest)
-        + _figure(
+        + "".join(figure(pictures[key], alt, caption) for key, alt, caption in rest)
+        + figure(
             pictures["bid_ask"],
             "Fit against bid and ask: one dot per quote",
             "One dot per quote, coloured by where the model lies between bid and ask; ringed where "
@@ -263,12 +261,12 @@ def _quality(slices: Sequence[ExpirySlice]) -> str:
             f"{100.0 * s.level:.2f}",
             f"{1e4 * s.rms:.0f}",
             f"{100.0 * s.share_inside:.0f}",
-            _signed(f"{s.half_widths[np.argmax(np.abs(s.half_widths))]:+.1f}"),
+            signed(f"{s.half_widths[np.argmax(np.abs(s.half_widths))]:+.1f}"),
         )
         for s in slices
     ]
     head = ("expiry", "days", "quotes", "ATM %", "rms bp", "inside %", "worst")
-    return _table(head, rows, numeric=range(1, 7)) + (
+    return table(head, rows, numeric=range(1, 7)) + (
         "<p class='note'>ATM: volatility of the model at the forward. Worst: the largest residual "
         "in half-widths, beyond ±1 outside bid–ask.</p>"
     )
@@ -276,7 +274,7 @@ def _quality(slices: Sequence[ExpirySlice]) -> str:
 
 def _smiles(slices: Sequence[ExpirySlice], smiles: Sequence[bytes]) -> str:
     figures = "".join(
-        _figure(png, f"Smile of {s.label}", "") for s, png in zip(slices, smiles, strict=True)
+        figure(png, f"Smile of {s.label}", "") for s, png in zip(slices, smiles, strict=True)
     )
     return (
         "<p class='note'>Bars run from bid to ask, orange where the model lies outside. "
@@ -299,12 +297,12 @@ def _forwards(fit: Fit) -> str:
                 f"{p.forward:,.{places}f}",
                 f"{p.forward_error:,.{places}f}" if math.isfinite(p.forward_error) else "–",
                 f"{p.discount:.6f}",
-                _signed(f"{100.0 * rate:.2f}"),
+                signed(f"{100.0 * rate:.2f}"),
                 f"{p.pairs}",
                 p.method,
             )
         )
-    return _table(
+    return table(
         (
             "expiry",
             "days",
@@ -331,7 +329,7 @@ def _set_aside(fit: Fit) -> str:
         (_STAGES.get(stage, stage), reason, f"{count:,}", examples, first.get((stage, reason), ""))
         for stage, reason, count, examples in cleaning_table(fit.rejections)
     ]
-    summary = _table(
+    summary = table(
         ("found when", "reason", "quotes", "file rows", "for example"),
         rows,
         numeric=(2,),
@@ -340,10 +338,10 @@ def _set_aside(fit: Fit) -> str:
     listed = fit.rejections[:MOST_LISTED]
     more = len(fit.rejections) - len(listed)
     note = f"<p class='note'>The first {len(listed)}; {more:,} more.</p>" if more else ""
-    single = _table(
+    single = table(
         ("row", "expiry", "strike", "side", "reason", "detail"),
         [
-            (f"{r.row}", r.expiry, _number(r.strike, 8), r.side, r.reason, r.detail)
+            (f"{r.row}", r.expiry, number(r.strike, 8), r.side, r.reason, r.detail)
             for r in sorted(listed, key=lambda r: r.row)
         ],
         numeric=(0, 2),
@@ -356,9 +354,7 @@ _STAGES = {"parse": "reading", "clean": "cleaning"}
 
 
 def _cautions() -> str:
-    return (
-        "<dl>" + "".join(f"<dt>{_text(a)}</dt><dd>{_text(b)}</dd>" for a, b in _CAUTIONS) + "</dl>"
-    )
+    return "<dl>" + "".join(f"<dt>{text(a)}</dt><dd>{text(b)}</dd>" for a, b in _CAUTIONS) + "</dl>"
 
 
 def _origin(fit: Fit) -> str:
@@ -366,129 +362,8 @@ def _origin(fit: Fit) -> str:
         ("quotes fitted, SHA-256", fit.fingerprint),
         ("optimiser", fit.message),
         ("arbitrage checked on", fit.arbitrage.grid),
-        ("worst calendar spread", _signed(f"{fit.arbitrage.worst_calendar:.1e} of the forward")),
-        ("worst butterfly spread", _signed(f"{fit.arbitrage.worst_butterfly:.1e} of the forward")),
+        ("worst calendar spread", signed(f"{fit.arbitrage.worst_calendar:.1e} of the forward")),
+        ("worst butterfly spread", signed(f"{fit.arbitrage.worst_butterfly:.1e} of the forward")),
         *((name.replace("_", " "), version) for name, version in versions().items()),
     ]
-    return _table(("", ""), rows, wrapped=(1,), head=False)
-
-
-def _section(title: str, body: str) -> str:
-    return f"<section><h2>{_text(title)}</h2>{body}</section>"
-
-
-def _figure(png: bytes, alt: str, caption: str) -> str:
-    below = f"<figcaption>{_text(caption)}</figcaption>" if caption else ""
-    return f"<figure><img src='{_data(png)}' alt='{_text(alt)}'>{below}</figure>"
-
-
-def _table(
-    head_cells: Sequence[str],
-    rows: Iterable[Sequence[str]],
-    *,
-    numeric: Iterable[int] = (),
-    wrapped: Iterable[int] = (),
-    head: bool = True,
-) -> str:
-    kinds = dict.fromkeys(numeric, " class='n'") | dict.fromkeys(wrapped, " class='w'")
-
-    def cells(tag: str, row: Sequence[str]) -> str:
-        return "".join(
-            f"<{tag}{kinds.get(i, '')}>{_text(cell)}</{tag}>" for i, cell in enumerate(row)
-        )
-
-    top = f"<thead><tr>{cells('th', head_cells)}</tr></thead>" if head else ""
-    body = "".join(f"<tr>{cells('td', row)}</tr>" for row in rows)
-    return f"<div class='scroll'><table>{top}<tbody>{body}</tbody></table></div>"
-
-
-def _text(value: Any) -> str:
-    return escape(str(value), quote=True)
-
-
-def _number(value: float, digits: int) -> str:
-    return _signed(f"{value:.{digits}g}") if math.isfinite(value) else "–"
-
-
-def _signed(text: str) -> str:
-    return text.replace("-", "−")
-
-
-def _moment(moment: np.datetime64) -> str:
-    return str(moment.astype("datetime64[m]")).replace("T", " ") + " UTC"
-
-
-def _data(png: bytes) -> str:
-    return "data:image/png;base64," + base64.b64encode(png).decode("ascii")
-
-
-_STYLE = """
-:root { --ink: #1c2733; --soft: #5a6672; --line: #d9dfe4; --blue: #0f5394; --orange: #b03f08; }
-* { box-sizing: border-box; }
-body { margin: 0; background: #f4f6f7; color: var(--ink);
-  font: 15.5px/1.5 system-ui, -apple-system, "Liberation Sans", Arial, sans-serif; }
-main { max-width: 1180px; margin: 0 auto; padding: 28px 28px 60px; }
-header { border-left: 5px solid var(--blue); padding-left: 18px; margin-bottom: 22px; }
-header p { max-width: 62em; margin: 6px 0 0; }
-.kind { color: var(--blue); font-weight: 600; letter-spacing: .02em; margin: 0; }
-h1 { font-size: 27px; line-height: 1.2; margin: 2px 0 6px; overflow-wrap: anywhere; }
-h2 { font-size: 19px; margin: 0 0 14px; }
-section { background: #fff; border: 1px solid var(--line); border-radius: 6px;
-  padding: 20px 22px; margin: 0 0 18px; }
-.cards { display: grid; grid-template-columns: repeat(4, 1fr); gap: 12px; margin-bottom: 16px; }
-.card { border-top: 3px solid var(--blue); background: #f4f7fa; padding: 10px 14px 12px; }
-.card p { margin: 0; color: var(--soft); font-size: 13.5px; }
-.card strong { display: block; font-size: 23px; line-height: 1.25; }
-.card span { color: var(--soft); font-size: 13px; }
-.card.bad { border-color: var(--orange); background: #fcf1ea; }
-.card.bad strong { color: var(--orange); }
-.flags { margin: 0 0 16px; padding: 10px 14px 10px 32px; border-left: 4px solid var(--orange);
-  background: #fcf1ea; }
-.scroll { overflow-x: auto; }
-table { border-collapse: collapse; font-size: 14px; font-variant-numeric: tabular-nums; }
-th { text-align: left; color: var(--soft); font-weight: 600; vertical-align: bottom; }
-th, td { padding: 4px 18px 4px 0; border-bottom: 1px solid #ebeff2; }
-td { vertical-align: top; white-space: nowrap; }
-.n { text-align: right; }
-td.w { white-space: normal; overflow-wrap: anywhere; min-width: 15em; }
-.note, figcaption { color: var(--soft); font-size: 13.5px; max-width: 62em; }
-.note { margin: 10px 0; }
-details { margin-top: 14px; }
-summary { cursor: pointer; color: var(--blue); font-weight: 600; }
-figure { margin: 0; }
-figure.wide { margin-bottom: 26px; min-width: min(100%, 460px); }
-figcaption { margin-top: 4px; }
-img { display: block; width: 100%; height: auto; }
-.pictures { display: grid; grid-template-columns: repeat(2, minmax(0, 1fr)); gap: 28px 30px;
-  margin-top: 14px; }
-dl { margin: 0; display: grid; grid-template-columns: 13em 1fr; gap: 8px 18px; }
-dt { font-weight: 600; }
-dd { margin: 0; max-width: 56em; }
-@media (max-width: 860px) {
-  main { padding: 16px 10px 40px; }
-  section { padding: 16px 13px; }
-  .cards { grid-template-columns: repeat(2, 1fr); }
-  .pictures { grid-template-columns: minmax(0, 1fr); }
-  dl { grid-template-columns: 1fr; gap: 2px; }
-  dd { margin-bottom: 10px; }
-  table { font-size: 13px; }
-  th, td { padding-right: 9px; }
-  .card strong { font-size: 20px; }
-  td.w { min-width: 24em; }
-}
-@media print {
-  @page { margin: 14mm 12mm; }
-  body { background: #fff; font-size: 10pt; }
-  main { max-width: none; padding: 0; }
-  section { border: 0; border-top: 1px solid var(--line); border-radius: 0; padding: 12px 0; }
-  figure, tr, .card, dt, dd { break-inside: avoid; }
-  h2 { break-after: avoid; }
-  .cards { grid-template-columns: repeat(4, 1fr); }
-  .pictures { grid-template-columns: repeat(2, minmax(0, 1fr)); gap: 14px; }
-  .scroll { overflow: visible; }
-  table { font-size: 8.5pt; }
-  th, td { padding: 3px 9px 3px 0; }
-  td.w { min-width: 0; }
-  * { -webkit-print-color-adjust: exact; print-color-adjust: exact; }
-}
-"""
+    return table(("", ""), rows, wrapped=(1,), head=False)
