@@ -31,16 +31,11 @@ fourier_slice plan_slice(const py::tuple& model, const py::tuple& curve,
     py::gil_scoped_release release;  // safe: no Python object is touched
     const double variance = effective_variance(selected_kernels(), m, c, maturity);
     if (!(variance > 0.0)) throw std::invalid_argument("the model has no variance to plan for");
-    auto evaluate = [&](std::span<const complex> u, std::span<complex> values,
-                        std::span<double> errors) {
-        const auto result = log_transform(selected_kernels(), m, c, u, {&maturity, 1},
-                                          {scheme::automatic, 0, tolerance});
-        std::copy(result.values.begin(), result.values.end(), values.begin());
-        std::copy(result.errors.begin(), result.errors.end(), errors.begin());
-    };
-    fourier_line line;
-    price_slice(evaluate, k, variance, tolerance, &line);
-    return fourier_slice(std::move(line), k, variance);
+    double reach = nearest_reach;
+    for (double x : k)
+        while (std::abs(x) > reach * std::sqrt(variance)) reach *= 2.0;
+    auto found = line_of(selected_kernels(), m, c, maturity, variance, reach, tolerance);
+    return fourier_slice(std::move(found.line), k, variance);
 }
 
 }  // namespace

@@ -71,21 +71,37 @@ inline void solve_adams(const target_kernels& kernels, const model_parameters& m
     }
 }
 
-// log-transforms at one maturity on meshes of `steps` and `steps`/2; `errors` is the modulus of
-// their difference in phi. The scheme's order is min(2, 1 + alpha), so the finer value is closer
-// to the truth than that by a factor of two or more once the mesh resolves psi.
+// Error of phi = exp(fine) from three meshes, each with half the steps of the next. The two
+// differences of log phi give the rate of convergence, their geometric series what is left, doubled
+// for safety. A mesh that does not resolve the solution converges slowly or not at all: then nothing
+// is known but |phi(u)| <= phi(i Im u), the bound `largest`.
+inline double adams_error(std::complex<double> coarse, std::complex<double> middle,
+                          std::complex<double> fine, double largest) {
+    constexpr double slowest = 0.7;  // rate of an order of one half
+    const double last = std::abs(fine - middle), before = std::abs(middle - coarse);
+    if (last == 0.0) return 0.0;
+    const double rate = std::max(last / before, 0.25);
+    if (!(rate < slowest)) return largest;
+    const double left = 2.0 * last * rate / (1.0 - rate);
+    return std::min(std::exp(fine.real()) * std::expm1(left), largest);
+}
+
+// log-transforms at one maturity on a mesh of `steps` steps, with errors from two coarser ones.
 inline void adams_with_error(const target_kernels& kernels, const model_parameters& m,
                              const variance_curve& curve, std::span<const std::complex<double>> u,
-                             double maturity, std::size_t steps,
+                             double maturity, std::size_t steps, std::span<const double> largest,
                              std::span<std::complex<double>> values, std::span<double> errors) {
-    std::vector<std::complex<double>> coarse(u.size());
-    const std::size_t half = std::max<std::size_t>(1, steps / 2);
-    solve_adams(kernels, m, u, maturity, half,
-                uniform_functional(curve, m.mean_reversion, maturity, half, false), coarse);
-    solve_adams(kernels, m, u, maturity, steps,
-                uniform_functional(curve, m.mean_reversion, maturity, steps, false), values);
+    std::vector<std::complex<double>> coarse(u.size()), middle(u.size());
+    auto solve = [&](std::size_t n, std::span<std::complex<double>> into) {
+        n = std::max<std::size_t>(1, n);
+        solve_adams(kernels, m, u, maturity, n,
+                    uniform_functional(curve, m.mean_reversion, maturity, n, false), into);
+    };
+    solve(steps / 4, coarse);
+    solve(steps / 2, middle);
+    solve(steps, values);
     for (std::size_t i = 0; i < u.size(); ++i)
-        errors[i] = std::abs(std::exp(values[i]) - std::exp(coarse[i]));
+        errors[i] = adams_error(coarse[i], middle[i], values[i], largest[i]);
 }
 
 inline constexpr std::size_t adams_first_steps = 64;
@@ -95,11 +111,11 @@ inline constexpr std::size_t adams_most_steps = 2048;
 inline void adams_to_tolerance(const target_kernels& kernels, const model_parameters& m,
                                const variance_curve& curve,
                                std::span<const std::complex<double>> u, double maturity,
-                               std::span<const double> bounds,
+                               std::span<const double> bounds, std::span<const double> largest,
                                std::span<std::complex<double>> values, std::span<double> errors) {
     std::vector<std::size_t> open(u.size());
     for (std::size_t i = 0; i < open.size(); ++i) open[i] = i;
-    std::vector<std::complex<double>> some_u(u.begin(), u.end()), previous, current;
+    std::vector<std::complex<double>> some_u(u.begin(), u.end()), older, previous, current;
     for (std::size_t steps = adams_first_steps; !open.empty(); steps *= 2) {
         const auto rows = uniform_functional(curve, m.mean_reversion, maturity, steps, false);
         current.resize(open.size());
@@ -108,15 +124,17 @@ inline void adams_to_tolerance(const target_kernels& kernels, const model_parame
         for (std::size_t i = 0; i < open.size(); ++i) {
             const std::size_t at = open[i];
             values[at] = current[i];
-            if (steps > adams_first_steps) {
-                errors[at] = std::abs(std::exp(current[i]) - std::exp(previous[i]));
+            if (steps >= 4 * adams_first_steps) {
+                errors[at] = adams_error(older[i], previous[i], current[i], largest[at]);
                 if (errors[at] <= bounds[at]) continue;
             }
             open[kept] = at, some_u[kept] = some_u[i], current[kept] = current[i];
+            if (!previous.empty()) previous[kept] = previous[i];
             ++kept;
         }
         open.resize(kept), some_u.resize(kept), current.resize(kept);
-        previous.swap(current);
+        if (!previous.empty()) previous.resize(kept);
+        older.swap(previous), previous.swap(current);
         if (steps == adams_most_steps) break;
     }
 }

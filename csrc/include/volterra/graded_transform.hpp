@@ -260,7 +260,7 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
                     relative = std::max(relative, std::norm(values[t * n + i] - finer[t * n + i]) /
                                                       std::max(1.0, std::norm(values[t * n + i])));
                 relative = std::sqrt(relative);
-                relative = 0.25 * relative + 0.03 * graded_level_error(level[i]);
+                relative = 0.5 * relative + 0.06 * graded_level_error(level[i]);
                 const double c0 = std::abs(riccati(m, u[i]).c0);
                 for (std::size_t t = 0; t < maturities.size(); ++t) {
                     const std::size_t at = t * n + i;
@@ -268,7 +268,7 @@ inline void solve_log_transform(const target_kernels& kernels, const model_param
                     const double size = length(values[at]);
                     const double floor = 8.0 * std::numeric_limits<double>::epsilon() *
                                          (c0 * integrals[t] + size + 1.0);
-                    errors[at] = modulus * (2.0 * change(finer[at] - values[at]) + floor +
+                    errors[at] = modulus * (4.0 * change(finer[at] - values[at]) + floor +
                                             relative * std::max(1.0, size));
                     met = met && errors[at] <= bounds[at];
                 }

@@ -50,6 +50,7 @@ public:
         result.values.resize(size);
         result.errors.assign(size, 0.0);
         bounds_.assign(size, options.tolerance);
+        largest_.assign(size, 1.0);
     }
 
     void run() {
@@ -61,8 +62,11 @@ public:
             for (std::size_t t = 0; t < maturities_.size(); ++t) solve_uniform(t);
         else
             solve_on_graded_mesh();
-        for (std::size_t i = 0; i < bounds_.size(); ++i)
+        for (std::size_t i = 0; i < bounds_.size(); ++i) {
+            if (std::isnan(result.values[i].real()) || std::isnan(result.errors[i]))
+                result.errors[i] = std::numeric_limits<double>::infinity();
             result.worst_ratio = std::max(result.worst_ratio, result.errors[i] / bounds_[i]);
+        }
     }
 
     transform_result result;
@@ -84,7 +88,8 @@ private:
             for (std::size_t i = 0; i < u_.size(); ++i) {
                 const double y = u_[i].imag();
                 if (y == 0.0 || y == -1.0) continue;  // E[1] = E[exp X] = 1
-                bounds_[at(t, i)] *= std::exp(sizes[t * axis.size() + moments[y]].real());
+                largest_[at(t, i)] = std::exp(sizes[t * axis.size() + moments[y]].real());
+                bounds_[at(t, i)] *= largest_[at(t, i)];
             }
     }
 
@@ -124,11 +129,13 @@ private:
         const std::span<complex> values(result.values.data() + at(t, 0), u_.size());
         const std::span<double> errors(result.errors.data() + at(t, 0), u_.size());
         const std::span<const double> bounds(bounds_.data() + at(t, 0), u_.size());
+        const std::span<const double> largest(largest_.data() + at(t, 0), u_.size());
         if (options_.steps)
-            adams_with_error(kernels_, m_, curve_, u_, maturities_[t], options_.steps, values,
-                             errors);
+            adams_with_error(kernels_, m_, curve_, u_, maturities_[t], options_.steps, largest,
+                             values, errors);
         else
-            adams_to_tolerance(kernels_, m_, curve_, u_, maturities_[t], bounds, values, errors);
+            adams_to_tolerance(kernels_, m_, curve_, u_, maturities_[t], bounds, largest, values,
+                               errors);
         for (std::size_t i = 0; i < u_.size(); ++i) errors[i] += rounding_error(t, i);
     }
 
@@ -141,7 +148,8 @@ private:
                 if (!(result.errors[at(t, i)] < std::numeric_limits<double>::infinity()) ||
                     std::isnan(result.values[at(t, i)].real())) {
                     adams_to_tolerance(kernels_, m_, curve_, u_.subspan(i, 1), maturities_[t],
-                                       {&bounds_[at(t, i)], 1}, {&result.values[at(t, i)], 1},
+                                       {&bounds_[at(t, i)], 1}, {&largest_[at(t, i)], 1},
+                                       {&result.values[at(t, i)], 1},
                                        {&result.errors[at(t, i)], 1});
                     result.errors[at(t, i)] += rounding_error(t, i);
                 }
@@ -166,6 +174,7 @@ private:
     transform_options options_;
     bool closed_form_;
     std::vector<double> bounds_;
+    std::vector<double> largest_;  // phi(i Im u) >= |phi(u)|
 };
 
 // Maturities in any order, repetitions allowed. With more than one thread the u are shared out;
