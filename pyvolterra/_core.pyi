@@ -21,6 +21,7 @@ def log_transform(
     steps: int,
     tolerance: float,
     threads: int = 1,
+    estimate: bool = True,
 ) -> tuple[_Complexes, _Floats, float]: ...
 def adams_solution(
     model: _Model, u: _Complexes, horizon: float, steps: int, instruction_set: str = ""

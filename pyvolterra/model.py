@@ -270,6 +270,7 @@ class VolterraHeston:
             count,
             bound,
             workers,
+            full_output,
         )
         if worst > 1.0 and steps is None:
             warnings.warn(

@@ -22,12 +22,12 @@ const target_kernels& to_kernels(const std::string& instruction_set) {
 
 py::tuple transform(const py::tuple& model, const py::tuple& curve, const py::array& u,
                     const py::array& maturities, const std::string& method, std::size_t steps,
-                    double tolerance, std::size_t threads) {
+                    double tolerance, std::size_t threads, bool estimate) {
     const auto m = to_model(model);
     const auto c = to_curve(curve);
     const auto nodes = input<complex>(u, "u");
     const auto times = input<double>(maturities, "maturities");
-    const transform_options options{to_scheme(method), steps, tolerance, threads};
+    const transform_options options{to_scheme(method), steps, tolerance, threads, estimate};
     transform_result result;
     {
         py::gil_scoped_release release;  // safe: only C++ copies and arrays held by the caller
@@ -36,7 +36,7 @@ py::tuple transform(const py::tuple& model, const py::tuple& curve, const py::ar
     const auto rows = static_cast<py::ssize_t>(times.size());
     const auto columns = static_cast<py::ssize_t>(nodes.size());
     auto values = owning<complex>({rows, columns});
-    auto errors = owning<double>({rows, columns});
+    auto errors = owning<double>({estimate ? rows : 0, columns});
     std::copy(result.values.begin(), result.values.end(), output(values).begin());
     std::copy(result.errors.begin(), result.errors.end(), output(errors).begin());
     return py::make_tuple(values, errors, result.worst_ratio);
@@ -88,8 +88,9 @@ void bind_transform(py::module_& module) {
     });
     module.def("log_transform", &transform, py::arg("model"), py::arg("curve"), py::arg("u"),
                py::arg("maturities"), py::arg("scheme"), py::arg("steps"), py::arg("tolerance"),
-               py::arg("threads") = 1,
-               "(values, errors, worst error/tolerance): log E[exp(iuX_T)], maturities x u.");
+               py::arg("threads") = 1, py::arg("estimate") = true,
+               "(values, errors, worst error/tolerance): log E[exp(iuX_T)], maturities x u; no "
+               "errors without `estimate`.");
     module.def("adams_solution", &adams_solution, py::arg("model"), py::arg("u"),
                py::arg("horizon"), py::arg("steps"), py::arg("instruction_set") = "",
                "psi at the nodes of a uniform mesh, (steps + 1) x u.");

@@ -1,10 +1,10 @@
 // One element of the graded scheme for a block of lanes: the nonlinear system psi = h + W G(psi).
 //
 // W is one real m x m block for all lanes, G = left^alpha (c0 + c1 psi + c2 psi^2) acts node by node.
-// With W^-1 = Q S Q^T in real Schur form, a Newton step with one common derivative d costs two
-// small real products and a triangular solve,
+// With W^-1 = B S B^-1, S real in 2 x 2 blocks, a Newton step with one common derivative d costs two
+// small real products and a few 2 x 2 solves,
 //
-//     psi <- Q (S - d)^-1 [ Q^T W^-1 h + Q^T (G(psi) - d psi) ],
+//     psi <- B (S - d)^-1 [ B^-1 W^-1 h + B^-1 (G(psi) - d psi) ],
 //
 // and no factorisation per lane. Where that does not converge, or lands on another branch of the
 // quadratic, full Newton steps with elimination start again from the left edge.
@@ -17,17 +17,16 @@
 #include <immintrin.h>
 #endif
 
+#include "volterra/graded_limits.hpp"
 #include "volterra/simd.hpp"
 
 namespace volterra {
 
-// One element's weights to itself and their Schur form; see graded_operator.
+// One element's weights to itself and the basis they are solved in; see graded_operator.
 struct graded_matrices {
-    const double *own, *q, *q_transposed, *s, *to_history;
+    const double *own, *basis, *to_basis, *s, *to_history;
     bool paired;
 };
-
-inline constexpr std::size_t graded_most_nodes = 10;
 
 }  // namespace volterra
 
@@ -38,6 +37,7 @@ namespace volterra::VOLTERRA_TARGET {
 namespace graded_detail {
 
 inline constexpr std::size_t packs = pack_width == 8 ? 2 : 1;
+inline constexpr double loosest = 1e-8;  // square of the least relative accuracy asked of psi
 inline constexpr std::size_t lanes = packs * pack_width;
 inline constexpr std::size_t row = 2 * lanes;
 inline constexpr std::size_t row_packs = 2 * packs;
@@ -54,6 +54,7 @@ VOLTERRA_INLINE complex_pack select(mask which, complex_pack a, complex_pack b) 
 }
 VOLTERRA_INLINE pack norm(complex_pack z) { return z.re * z.re + z.im * z.im; }
 VOLTERRA_INLINE pack larger(pack a, pack b) { return a > b ? a : b; }
+VOLTERRA_INLINE pack smaller(pack a, pack b) { return a < b ? a : b; }
 VOLTERRA_INLINE bool any(mask which) {
 #if defined(__AVX512DQ__)
     return _mm512_movepi64_mask(reinterpret_cast<__m512i>(which)) != 0;
@@ -132,9 +133,14 @@ struct global_guess {
     }
 };
 
-VOLTERRA_INLINE global_guess make_guess(const quadratic& f, const double* series) {
+// The limit of psi.
+VOLTERRA_INLINE complex_pack stable_root(const quadratic& f) {
     const complex_pack root = sqrt(f.c1 * f.c1 - (4.0 * f.c2) * f.c0);
-    const complex_pack r = safe_divide(broadcast(2.0) * f.c0, root - f.c1);
+    return safe_divide(broadcast(2.0) * f.c0, root - f.c1);
+}
+
+VOLTERRA_INLINE global_guess make_guess(const quadratic& f, const double* series) {
+    const complex_pack r = stable_root(f);
     const complex_pack b0 = broadcast(series[0]) * f.c0;
     const complex_pack b1 = broadcast(series[1]) * (f.c1 * b0);
     const complex_pack b2 = broadcast(series[2]) * (f.c1 * b1 + f.c2 * (b0 * b0));
@@ -186,8 +192,8 @@ inline pack newton_step(const double* w, const quadratic& f, const double* h, do
 // Full Newton for the lanes of `open`; returns the lanes that did not converge.
 template <std::size_t m>
 inline mask newton(const double* w, const quadratic& f, const double* h, double* psi, mask open,
-                   double accuracy) {
-    const double goal = accuracy * accuracy, sharp = 1e-28;
+                   pack strict) {
+    const double sharp = 1e-28;
     for (int step = 0; step < 40 && any(open); ++step) {
         complex_pack before[m];
         VOLTERRA_UNROLL
@@ -202,8 +208,9 @@ inline mask newton(const double* w, const quadratic& f, const double* h, double*
             scale = larger(scale, norm(x));
         }
         // The step that follows one of relative size e has relative size e^2 or so.
-        const double bound = step < 12 ? (goal > sharp ? __builtin_sqrt(goal) * 1e-2 : 1e-16) : sharp;
-        open = open & ~(size <= larger(broadcast(bound), broadcast(sharp)) * scale);
+        const pack relative = smaller(1.0 / (strict * scale), broadcast(loosest));
+        const pack bound = step < 12 ? 1e-2 * sqrt(larger(relative, broadcast(sharp))) : broadcast(sharp);
+        open = open & ~(size <= bound * scale);
     }
     return open;
 }
@@ -231,132 +238,167 @@ struct shifted_factors {
 
 template <std::size_t m>
 VOLTERRA_INLINE void factor(const double* s, complex_pack d, shifted_factors<m>& to) {
+    constexpr std::size_t blocks = m / 2;
+    complex_pack determinant[blocks];
+    pack size[blocks], before[blocks];  // before[k]: the product of the sizes 0 .. k - 1
+    pack product = broadcast(1.0);
     VOLTERRA_UNROLL
-    for (std::size_t k = 0; k < m; k += 2) {
-        const double s12 = s[k * m + k + 1], s21 = s[(k + 1) * m + k];
-        const complex_pack p = {s[k * m + k] - d.re, -d.im};
-        const complex_pack q = {s[(k + 1) * m + k + 1] - d.re, -d.im};
-        complex_pack det = p * q;
-        det.re -= s12 * s21;
-        const complex_pack inverse = complex_pack{broadcast(1.0), broadcast(0.0)} / det;
-        to.f11[k / 2] = q * inverse;
-        to.f12[k / 2] = broadcast(-s12) * inverse;
-        to.f21[k / 2] = broadcast(-s21) * inverse;
-        to.f22[k / 2] = p * inverse;
+    for (std::size_t k = 0; k < blocks; ++k) {
+        const double* const b = s + 2 * k * (m + 1);
+        const complex_pack p = {b[0] - d.re, -d.im}, q = {b[m + 1] - d.re, -d.im};
+        determinant[k] = p * q;
+        determinant[k].re -= b[1] * b[m];
+        to.f11[k] = q, to.f22[k] = p;
+        size[k] = norm(determinant[k]);
+        before[k] = product;
+        product *= size[k];
+    }
+    pack inverse = 1.0 / product;  // the only division
+    VOLTERRA_UNROLL
+    for (std::size_t step = 0; step < blocks; ++step) {
+        const std::size_t k = blocks - 1 - step;
+        const double* const b = s + 2 * k * (m + 1);
+        const pack scale = inverse * before[k];
+        inverse *= size[k];
+        const complex_pack reciprocal = {determinant[k].re * scale, -determinant[k].im * scale};
+        to.f11[k] = to.f11[k] * reciprocal;
+        to.f22[k] = to.f22[k] * reciprocal;
+        to.f12[k] = broadcast(-b[1]) * reciprocal;
+        to.f21[k] = broadcast(-b[m]) * reciprocal;
     }
 }
 
-// y <- (S - d)^-1 y for one pack.
+// y <- (S - d)^-1 y
 template <std::size_t m>
-VOLTERRA_INLINE void solve_shifted(const double* s, const shifted_factors<m>& f, complex_pack (&y)[m]) {
-    for (std::size_t k = m; k >= 2; k -= 2) {
-        complex_pack &one = y[k - 2], &two = y[k - 1];
+VOLTERRA_INLINE void solve_shifted(const double* s, const shifted_factors<m> (&f)[packs], double* y) {
+    VOLTERRA_UNROLL
+    for (std::size_t step = 0; step < m / 2; ++step) {
+        const std::size_t k = m - 2 * step;
         VOLTERRA_UNROLL
-        for (std::size_t j = k; j < m; ++j) {
-            one = one - broadcast(s[(k - 2) * m + j]) * y[j];
-            two = two - broadcast(s[(k - 1) * m + j]) * y[j];
+        for (std::size_t p = 0; p < packs; ++p) {
+            double* const at = y + p * pack_width;
+            complex_pack one = load_complex(at + (k - 2) * row), two = load_complex(at + (k - 1) * row);
+            if constexpr (m > graded_diagonal_nodes) {
+                VOLTERRA_UNROLL
+                for (std::size_t j = k; j < m; ++j) {
+                    const complex_pack x = load_complex(at + j * row);
+                    one = one - broadcast(s[(k - 2) * m + j]) * x;
+                    two = two - broadcast(s[(k - 1) * m + j]) * x;
+                }
+            }
+            const std::size_t b = k / 2 - 1;
+            store_complex(at + (k - 2) * row, f[p].f11[b] * one + f[p].f12[b] * two);
+            store_complex(at + (k - 1) * row, f[p].f21[b] * one + f[p].f22[b] * two);
         }
-        const std::size_t p = k / 2 - 1;
-        const complex_pack upper = f.f11[p] * one + f.f12[p] * two;
-        two = f.f21[p] * one + f.f22[p] * two;
-        one = upper;
     }
 }
 
-// Solves psi = h + W G(psi) on one element from the guess in `psi`; `h` holds Q^T W^-1 h, `left` the
-// value at the left edge. The work rows `y` are overwritten. Returns through `open` the lanes that did not converge.
+// One step psi <- B (S - d)^-1 [ h + B^-1 (G(psi) - d psi) ], slope = c1 - d. With `measure` the lanes
+// that are not open keep their psi, and the squares of the step and of psi are returned, the step as
+// seen at three nodes, psi at the last one.
+template <std::size_t m, bool measure>
+VOLTERRA_INLINE void newton_with_common_slope(const graded_matrices& w, const quadratic (&f)[packs],
+                                              const complex_pack (&slope)[packs],
+                                              const shifted_factors<m> (&factors)[packs],
+                                              const double* h, double* psi, double* y,
+                                              const mask (&open)[packs], pack* size, pack* height) {
+    constexpr std::size_t rows = tile_rows<m>;
+    VOLTERRA_UNROLL
+    for (std::size_t top = 0; top < m; top += rows) {
+        pack acc[rows][row_packs];
+        VOLTERRA_UNROLL
+        for (std::size_t i = 0; i < rows; ++i)
+            VOLTERRA_UNROLL
+            for (std::size_t c = 0; c < row_packs; ++c)
+                acc[i][c] = load(h + (top + i) * row + c * pack_width);
+        VOLTERRA_UNROLL
+        for (std::size_t j = 0; j < m; ++j) {
+            pack x[row_packs];
+            VOLTERRA_UNROLL
+            for (std::size_t p = 0; p < packs; ++p) {
+                const complex_pack v = load_complex(psi + j * row + p * pack_width);
+                const complex_pack g = f[p].c0 + (slope[p] + f[p].c2 * v) * v;
+                x[p] = g.re, x[packs + p] = g.im;
+            }
+            VOLTERRA_UNROLL
+            for (std::size_t i = 0; i < rows; ++i) {
+                const pack a = broadcast(w.to_basis[j * m + top + i]);
+                VOLTERRA_UNROLL
+                for (std::size_t c = 0; c < row_packs; ++c) acc[i][c] += a * x[c];
+            }
+        }
+        VOLTERRA_UNROLL
+        for (std::size_t i = 0; i < rows; ++i)
+            VOLTERRA_UNROLL
+            for (std::size_t c = 0; c < row_packs; ++c)
+                store(y + (top + i) * row + c * pack_width, acc[i][c]);
+    }
+    solve_shifted<m>(w.s, factors, y);
+    VOLTERRA_UNROLL
+    for (std::size_t p = 0; measure && p < packs; ++p) size[p] = broadcast(0.0);
+    VOLTERRA_UNROLL
+    for (std::size_t top = 0; top < m; top += rows) {
+        pack acc[rows][row_packs] = {};
+        multiply_tile<rows>(acc, w.basis + top, m, y, m);
+        VOLTERRA_UNROLL
+        for (std::size_t i = 0; i < rows; ++i)
+            VOLTERRA_UNROLL
+            for (std::size_t p = 0; p < packs; ++p) {
+                const std::size_t at = (top + i) * row + p * pack_width;
+                complex_pack x = {acc[i][p], acc[i][packs + p]};
+                if constexpr (measure) {
+                    const complex_pack old = load_complex(psi + at);
+                    if (top + i == 0 || top + i == m / 2 - 1 || top + i == m - 1)
+                        size[p] = larger(size[p], norm(x - old));
+                    if (top + i == m - 1) height[p] = norm(x);
+                    x = select(open[p], x, old);
+                }
+                store_complex(psi + at, x);
+            }
+    }
+}
+
+// Solves psi = h + W G(psi) on one element from the guess in `psi`; `h` holds B^-1 W^-1 h, `left` the
+// value at the left edge. `strict` is the inverse square of the absolute accuracy asked of psi. The work rows
+// `y` are overwritten. Returns through `open` the lanes that did not converge.
 template <std::size_t m>
 VOLTERRA_INLINE void solve_element(const graded_matrices& w, const quadratic (&f)[packs],
                                    const double* h, const double* left, double* psi, double* y,
-                                   double accuracy, mask (&open)[packs]) {
-    pack last[packs], spread[packs];
+                                   const pack (&strict)[packs], mask (&open)[packs]) {
+    pack last[packs];
     complex_pack slope[packs];
     shifted_factors<m> factors[packs];
     VOLTERRA_UNROLL
     for (std::size_t p = 0; p < packs; ++p) {
         open[p] = f[p].c2 == f[p].c2;
-        last[p] = broadcast(0.0);
         const complex_pack first = load_complex(psi + p * pack_width);
         const complex_pack end = load_complex(psi + (m - 1) * row + p * pack_width);
         const complex_pack middle = load_complex(psi + (m / 2) * row + p * pack_width);
         const complex_pack d = f[p].derivative(middle);
         slope[p] = f[p].c1 - d;
+        // Before a contraction has been seen: how far the derivative strays from d.
         const pack away = larger(norm(first - middle), norm(end - middle));
-        spread[p] = 4.0 * f[p].c2 * f[p].c2 * away / (4.0 + norm(d));
+        last[p] = 4.0 * (4.0 + norm(d)) / (4.0 * f[p].c2 * f[p].c2 * away);
         factor<m>(w.s, d, factors[p]);
     }
     bool working = w.paired;
-    constexpr std::size_t rows = tile_rows<m>;
     for (int step = 0; step < 12 && working; ++step) {
-        // y = Q^T W^-1 h + Q^T (G(psi) - d psi)
-        VOLTERRA_UNROLL
-        for (std::size_t top = 0; top < m; top += rows) {
-            pack acc[rows][row_packs];
-            VOLTERRA_UNROLL
-            for (std::size_t i = 0; i < rows; ++i)
-                VOLTERRA_UNROLL
-                for (std::size_t c = 0; c < row_packs; ++c)
-                    acc[i][c] = load(h + (top + i) * row + c * pack_width);
-            VOLTERRA_UNROLL
-            for (std::size_t j = 0; j < m; ++j) {
-                pack x[row_packs];
-                VOLTERRA_UNROLL
-                for (std::size_t p = 0; p < packs; ++p) {
-                    const complex_pack v = load_complex(psi + j * row + p * pack_width);
-                    const complex_pack g = f[p].c0 + (slope[p] + f[p].c2 * v) * v;
-                    x[p] = g.re, x[packs + p] = g.im;
-                }
-                VOLTERRA_UNROLL
-                for (std::size_t i = 0; i < rows; ++i) {
-                    const pack a = broadcast(w.q_transposed[j * m + top + i]);
-                    VOLTERRA_UNROLL
-                    for (std::size_t c = 0; c < row_packs; ++c) acc[i][c] += a * x[c];
-                }
-            }
-            VOLTERRA_UNROLL
-            for (std::size_t i = 0; i < rows; ++i)
-                VOLTERRA_UNROLL
-                for (std::size_t c = 0; c < row_packs; ++c)
-                    store(y + (top + i) * row + c * pack_width, acc[i][c]);
+        if (step == 0) {
+            newton_with_common_slope<m, false>(w, f, slope, factors, h, psi, y, open, nullptr, nullptr);
+            continue;
         }
-        VOLTERRA_UNROLL
-        for (std::size_t p = 0; p < packs; ++p) {
-            complex_pack x[m];
-            const std::size_t c = p * pack_width;
-            VOLTERRA_UNROLL
-            for (std::size_t j = 0; j < m; ++j) x[j] = load_complex(y + j * row + c);
-            solve_shifted<m>(w.s, factors[p], x);
-            VOLTERRA_UNROLL
-            for (std::size_t j = 0; j < m; ++j) store_complex(y + j * row + c, x[j]);
-        }
-        // psi = Q y, and the size of the step
-        pack size[packs] = {}, height[packs] = {};
-        VOLTERRA_UNROLL
-        for (std::size_t top = 0; top < m; top += rows) {
-            pack acc[rows][row_packs] = {};
-            multiply_tile<rows>(acc, w.q + top, m, y, m);
-            VOLTERRA_UNROLL
-            for (std::size_t i = 0; i < rows; ++i)
-                VOLTERRA_UNROLL
-                for (std::size_t p = 0; p < packs; ++p) {
-                    const std::size_t at = (top + i) * row + p * pack_width;
-                    const complex_pack x = {acc[i][p], acc[i][packs + p]};
-                    const complex_pack old = load_complex(psi + at);
-                    size[p] = larger(size[p], norm(x - old));
-                    if (top + i + 1 == m) height[p] = norm(x);
-                    store_complex(psi + at, select(open[p], x, old));
-                }
-        }
+        pack size[packs], height[packs];
+        newton_with_common_slope<m, true>(w, f, slope, factors, h, psi, y, open, size, height);
         working = false;
         VOLTERRA_UNROLL
         for (std::size_t p = 0; p < packs; ++p) {
-            // What is left is the last step times theta/(1 - theta), theta the observed
-            // contraction; before one has been seen, how far the derivative strays from d.
-            const pack by = step ? size[p] : spread[p], from = step ? last[p] : broadcast(1.0);
-            const pack goal = height[p] * (0.25 * accuracy * accuracy);
-            last[p] = size[p];
-            const mask done = ((size[p] * by <= goal * from) & (by < 0.25 * from)) |
+            // What is left is the last step times theta/(1 - theta), theta the observed contraction.
+            const pack by = step > 1 ? size[p] : broadcast(1.0);
+            const pack left_over = size[p] * by;
+            const mask done = ((left_over * strict[p] <= last[p]) & (by < 0.25 * last[p]) &
+                               (left_over <= loosest * height[p] * last[p])) |
                               (size[p] <= 1e-30 * height[p]);
+            last[p] = size[p];
             open[p] = open[p] & ~done;
             working |= any(open[p]);
         }
@@ -375,7 +417,7 @@ VOLTERRA_INLINE void solve_element(const graded_matrices& w, const quadratic (&f
             store_complex(psi + j * row + c, select(open[p], load_complex(left + c),
                                                     load_complex(psi + j * row + c)));
         const mask again = open[p];
-        open[p] = newton<m>(w.own, f[p], y + c, psi + c, open[p], accuracy);
+        open[p] = newton<m>(w.own, f[p], y + c, psi + c, open[p], strict[p]);
         open[p] = open[p] | (again & ~on_branch<m>(w, f[p], psi + c));
     }
 }

@@ -30,14 +30,17 @@ struct graded_meshes {
     std::size_t most;
     std::vector<double> edges;
     std::vector<double> scales;  // edges^alpha
+    std::vector<double> settling;  // edges^(1 - alpha) / Gamma(2 - alpha)
 
     graded_meshes(const graded_plan& p, double horizon, std::size_t elements)
-        : plan(&p), most(elements), edges(elements), scales(elements) {
+        : plan(&p), most(elements), edges(elements), scales(elements), settling(elements) {
         edges[most - 1] = horizon, scales[most - 1] = std::pow(horizon, p.alpha);
         for (std::size_t e = most - 1; e-- > 0;) {
             edges[e] = edges[e + 1] / p.shape->q;
             scales[e] = scales[e + 1] / p.step_scale;
         }
+        const double gamma = std::tgamma(2.0 - p.alpha);
+        for (std::size_t e = 0; e < most; ++e) settling[e] = edges[e] / (scales[e] * gamma);
     }
 };
 

@@ -13,12 +13,11 @@
 #include <utility>
 #include <vector>
 
+#include "volterra/graded_limits.hpp"
 #include "volterra/graded_weights.hpp"
 #include "volterra/real_schur.hpp"
 
 namespace volterra {
-
-inline constexpr std::size_t graded_most_elements = 64;
 
 // Numbers of one alpha, in this order: first, own, then (from_first, lag) by distance, the
 // distance-k pair divided by q^(k (alpha - 1)).
@@ -68,13 +67,15 @@ inline const graded_table& table_of(std::size_t nodes, double ratio) {
     return *entry;
 }
 
-// One element's weights to itself, W, and the real Schur form W^-1 = Q S Q^T. Column-major but for s.
+// One element's weights to itself, W, and W^-1 = B S B^-1 with S in 2 x 2 blocks: block diagonal, B
+// real eigenvectors, for up to graded_diagonal_nodes nodes, where B is well conditioned (below 1e4);
+// block triangular, B orthogonal, for more. Column-major but for s.
 struct graded_operator {
     std::vector<double> own;             // W
-    std::vector<double> q, q_transposed;
+    std::vector<double> basis, to_basis; // B, B^-1
     std::vector<double> s;               // row-major
-    std::vector<double> to_history;      // W Q: from Q^T W^-1 h, which the solver keeps, to h
-    std::vector<double> history;         // Q^T W^-1, for the maker of a plan
+    std::vector<double> to_history;      // W B: from B^-1 W^-1 h, which the solver keeps, to h
+    std::vector<double> history;         // B^-1 W^-1, for the maker of a plan
     bool paired;                         // S is in aligned 2 x 2 blocks: the fast iteration works
 };
 
@@ -86,9 +87,9 @@ struct graded_plan {
     std::size_t elements;  // the most a mesh may have, the first one included
     double step_scale;     // q^alpha
     // Column-major blocks (one column per source node).
-    std::vector<double> from_zero;       // m: Q^T W^-1 times the weights of t = 0 in the first element
+    std::vector<double> from_zero;       // m: B^-1 W^-1 times the weights of t = 0 in the first element
     graded_operator start, step;         // of the first element and of all others
-    std::vector<double> from_first;      // per distance k = 1 ..: Q^T W^-1 times the block
+    std::vector<double> from_first;      // per distance k = 1 ..: B^-1 W^-1 times the block
     std::vector<double> lag;             // per distance from elements - 2 down to 1, likewise
     std::vector<double> extrapolation;   // m x (m+1): previous element's psi to this one's
     std::vector<double> tau_power;       // m: (node / left edge)^alpha
@@ -119,7 +120,7 @@ inline void transpose(const double* from, std::size_t rows, std::size_t columns,
 // `own` is row-major, its rows `stride` apart.
 inline graded_operator make_operator(const double* own, std::size_t m, std::size_t stride) {
     graded_operator op;
-    for (auto* matrix : {&op.own, &op.q, &op.q_transposed, &op.to_history, &op.history})
+    for (auto* matrix : {&op.own, &op.basis, &op.to_basis, &op.to_history, &op.history})
         matrix->resize(m * m);
     transpose(own, m, m, stride, op.own.data());
     // inverse of W by elimination; W is well conditioned (below 100) and needs no pivoting
@@ -139,12 +140,31 @@ inline graded_operator make_operator(const double* own, std::size_t m, std::size
         }
     }
     op.s = inverse;
-    op.paired = real_schur(op.s.data(), op.q_transposed.data(), m);  // row-major Q
-    align_schur(op.s.data(), op.q_transposed.data(), m);
+    std::vector<double> q(m * m), x(m * m);  // row-major
+    op.paired = real_schur(op.s.data(), q.data(), m);
+    align_schur(op.s.data(), q.data(), m);
     for (std::size_t i = 2; i < m; i += 2) op.paired &= op.s[i * m + i - 1] == 0.0;
-    transpose(op.q_transposed.data(), m, m, m, op.q.data());
-    product(op.q_transposed.data(), inverse.data(), m, m, m, 1.0, op.history.data());
-    product(op.own.data(), op.q_transposed.data(), m, m, m, 1.0, op.to_history.data());
+    op.to_basis = q;  // B^-1 = Q^T row-major is Q column-major, and the other way round
+    transpose(q.data(), m, m, m, op.basis.data());
+    if (m <= graded_diagonal_nodes) {
+        op.paired = op.paired && block_eigenvectors(op.s.data(), x.data(), m);
+        for (std::size_t j = 0; j < m; ++j)  // B = Q X
+            for (std::size_t i = 0; i < m; ++i) {
+                double sum = 0.0;
+                for (std::size_t k = 0; k <= (j | 1); ++k) sum += q[i * m + k] * x[k * m + j];
+                op.basis[j * m + i] = sum;
+            }
+        for (std::size_t j = 0; j < m; ++j)  // X B^-1 = Q^T
+            for (std::size_t i = m; i-- > 0;)
+                for (std::size_t k = (i | 1) + 1; k < m; ++k)
+                    op.to_basis[j * m + i] -= x[i * m + k] * op.to_basis[j * m + k];
+        for (std::size_t i = 0; i < m; ++i)
+            for (std::size_t j = (i | 1) + 1; j < m; ++j) op.s[i * m + j] = 0.0;
+    }
+    std::vector<double> rows(m * m);  // B row-major
+    transpose(op.basis.data(), m, m, m, rows.data());
+    product(op.to_basis.data(), inverse.data(), m, m, m, 1.0, op.history.data());
+    product(op.own.data(), rows.data(), m, m, m, 1.0, op.to_history.data());
     return op;
 }
 }  // namespace detail

@@ -1,7 +1,5 @@
-// The graded scheme carried from a list of u to log-transforms at all maturities, with an error
-// estimate: packs u into lane blocks, chooses a mesh per u, refines where the estimate misses.
-//
-//   solve_log_transform(kernels, model, curve, u, maturities, tolerance, values, errors)
+// The graded scheme carried from a list of u to log-transforms at all maturities: packs u into lane
+// blocks, chooses a mesh per u, estimates the error and refines where the estimate misses.
 //
 // Every u gets a mesh from its own relaxation time, so no value depends on the other u of the call;
 // the plan (weights of one hurst index) is shared by all of them.
@@ -28,7 +26,7 @@ inline graded_block work_order(const graded_plan& plan) {
     graded_block b{};
     b.nodes = plan.shape->m, b.powers = plan.shape->x.data() + 1;
     auto matrices = [](const graded_operator& op) {
-        return graded_matrices{op.own.data(), op.q.data(), op.q_transposed.data(), op.s.data(),
+        return graded_matrices{op.own.data(), op.basis.data(), op.to_basis.data(), op.s.data(),
                                op.to_history.data(), op.paired};
     };
     b.start = matrices(plan.start), b.step = matrices(plan.step);
@@ -36,7 +34,33 @@ inline graded_block work_order(const graded_plan& plan) {
     b.lag = plan.lag.data(), b.lags = plan.elements > 2 ? plan.elements - 2 : 0;
     b.extrapolation = plan.extrapolation.data(), b.tau_power = plan.tau_power.data();
     b.series = plan.series;
+    b.total = plan.shape->total.data(), b.first_total = plan.first_total.data();
+    b.growth = plan.step_scale;
     return b;
+}
+
+// int_0^T g0, the scale of rounding errors: an upper bound of int xi when curve and mean reversion
+// are not negative.
+inline double integrated_curve(const variance_curve& curve, double alpha, double maturity) {
+    const bool driven = curve.form == curve_form::driven;
+    double sum = driven ? curve.initial * maturity : 0.0;
+    for_each_reversed_piece(curve, maturity, [&](std::size_t k, double from, double to) {
+        const double level = std::abs(curve.levels[k]);
+        sum += driven ? level * (std::pow(to, alpha + 1) - std::pow(from, alpha + 1)) /
+                            std::tgamma(alpha + 2)
+                      : level * (to - from);
+    });
+    return sum;
+}
+
+// A lower bound of the variance that multiplies F in log phi, which then falls at least as fast as
+// this times int F. It only saves work where |phi| is small.
+inline double least_variance(const variance_curve& curve, double mean_reversion) {
+    double least = curve.form == curve_form::driven ? curve.initial
+                                                    : *std::min_element(curve.levels.begin(), curve.levels.end());
+    if (curve.form == curve_form::driven)
+        for (double level : curve.levels) least = level < 0.0 ? 0.0 : least;
+    return mean_reversion < 0.0 ? 0.0 : std::max(least, 0.0);
 }
 
 // Points the work order at the mesh with `elements` elements.
@@ -50,19 +74,33 @@ inline void set_mesh(graded_block& b, const graded_meshes& meshes, std::size_t e
     b.weights_f = w.f.data() + skipped * m * w.count;
     b.weights_psi = w.uses_psi ? w.psi.data() + skipped * m * w.count : nullptr;
     b.first_active = w.first_active.data() + skipped;
+    b.lengths = meshes.edges.data() + skipped;
+    b.settling = meshes.settling.data() + skipped;
 }
 
 }  // namespace detail
 
+// What one solve leaves behind besides the values, one entry per u of the call.
+struct graded_record {
+    std::vector<char> solved;         // false where the solver failed
+    std::vector<double> doubt;        // an indicator of the error of phi; see graded_doubt
+    std::vector<double> guessed_from; // at maturities beyond this time phi was only guessed ...
+    std::vector<double> guessed_size; // ... because |phi| is below this
+
+    explicit graded_record(std::size_t n)
+        : solved(n, 0), doubt(n, 0.0), guessed_from(n, std::numeric_limits<double>::infinity()),
+          guessed_size(n, 0.0) {}
+};
+
 // One solve at one level of accuracy of the u numbered in `which`. values[r * u.size() + i]:
-// functional r (maturity, or maturity and elementary curve when `basis`) at u[i]; solved[i] is
-// false where the solver failed. Maturities must ascend.
+// functional r (maturity, or maturity and elementary curve when `basis`) at u[i]. Where |phi| is
+// below negligible[i] it is not solved further. Maturities must ascend.
 inline void graded_pass(const target_kernels& kernels, const graded_level& level,
                         const model_parameters& m, const variance_curve& curve,
                         std::span<const std::complex<double>> u,
                         std::span<const std::size_t> which, std::span<const double> maturities,
-                        bool basis, std::span<std::complex<double>> values,
-                        std::span<char> solved) {
+                        bool basis, std::span<const double> negligible,
+                        std::span<std::complex<double>> values, graded_record& record) {
     const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes, n = which.size();
     const double horizon = maturities.back();
     std::vector<riccati_coefficients> c(n);
@@ -80,13 +118,20 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
     const auto plan = make_graded_plan(m.alpha(), table_of(level.nodes, level.ratio), most);
     const graded_meshes meshes(plan, horizon, most);
     const auto functional = make_functional(meshes, curve, m.mean_reversion, maturities, basis);
-    aligned_buffer c0(row), c1(row), status(lanes), block_values(functional.count * row);
+    const std::size_t per_lane = 6;  // status, negligible, doubt, guessed, remainder, spare
+    aligned_buffer inputs(2 * row), outputs(per_lane * lanes), block_values(functional.count * row);
     aligned_buffer workspace(graded_workspace(level.nodes, most, lanes));
+    double *const c0 = inputs.data(), *const c1 = c0 + row;
+    double *const status = outputs.data(), *const cut = status + lanes, *const doubt = cut + lanes,
+           *const guessed = doubt + lanes, *const remainder = guessed + lanes;
     auto block = detail::work_order(plan);
-    block.c0 = c0.data(), block.c1 = c1.data(), block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
+    block.c0 = c0, block.c1 = c1, block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
     block.accuracy = level.accuracy;
-    block.values = block_values.data(), block.status = status.data();
-    block.workspace = workspace.data();
+    block.least_variance = detail::least_variance(curve, m.mean_reversion);
+    block.typical_variance = detail::integrated_curve(curve, m.alpha(), horizon) / horizon;
+    block.negligible = cut, block.doubt = doubt, block.guessed = guessed;
+    block.remainder = remainder, block.status = status;
+    block.values = block_values.data(), block.workspace = workspace.data();
     for (std::size_t start = 0; start < n;) {
         const std::size_t k = elements[order[start]], end = count[k];
         const auto first = make_first_functional(meshes, functional, k, curve, maturities, basis);
@@ -94,194 +139,180 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
         for (; start < end; start += lanes) {
             const std::size_t filled = std::min(lanes, end - start);
             for (std::size_t i = 0; i < lanes; ++i) {  // idle lanes repeat the last one
-                const auto& from = c[order[start + std::min(i, filled - 1)]];
-                c0[i] = from.c0.real(), c0[lanes + i] = from.c0.imag();
-                c1[i] = from.c1.real(), c1[lanes + i] = from.c1.imag();
+                const std::size_t from = order[start + std::min(i, filled - 1)];
+                c0[i] = c[from].c0.real(), c0[lanes + i] = c[from].c0.imag();
+                c1[i] = c[from].c1.real(), c1[lanes + i] = c[from].c1.imag();
+                cut[i] = negligible[which[from]];
             }
             kernels.solve_graded_block(block);
-            for (std::size_t i = 0; i < filled; ++i) solved[which[order[start + i]]] = status[i] == 0.0;
+            bool contiguous = true;
+            const std::size_t at = which[order[start]];
+            for (std::size_t i = 0; i < filled; ++i) {
+                const std::size_t to = which[order[start + i]];
+                contiguous &= to == at + i;
+                record.solved[to] = status[i] == 0.0;
+                record.doubt[to] = doubt[i];
+                const auto used = static_cast<std::size_t>(guessed[i]);
+                record.guessed_from[to] = used < k ? block.lengths[used - 1]
+                                                   : std::numeric_limits<double>::infinity();
+                record.guessed_size[to] = used < k ? std::exp(remainder[i]) : 0.0;
+            }
             for (std::size_t r = 0; r < functional.count; ++r) {
                 const double* const re = block_values.data() + r * row;
                 const double* const im = re + lanes;
+                std::complex<double>* const to = values.data() + r * u.size();
                 double finite = 0.0;
-                for (std::size_t i = 0; i < filled; ++i) {
-                    values[r * u.size() + which[order[start + i]]] = {re[i], im[i]};
-                    finite += re[i] * 0.0 + im[i] * 0.0;
-                }
+                for (std::size_t i = 0; i < filled; ++i) finite += re[i] * 0.0 + im[i] * 0.0;
+                if (contiguous)
+                    for (std::size_t i = 0; i < filled; ++i) to[at + i] = {re[i], im[i]};
+                else
+                    for (std::size_t i = 0; i < filled; ++i)
+                        to[which[order[start + i]]] = {re[i], im[i]};
                 if (finite == 0.0) continue;
                 for (std::size_t i = 0; i < filled; ++i)
                     if (re[i] - re[i] != 0.0 || im[i] - im[i] != 0.0)
-                        solved[which[order[start + i]]] = false;
+                        record.solved[which[order[start + i]]] = false;
             }
         }
         start = end;
     }
 }
 
-// How many levels finer the solution is that a value is compared with.
-inline constexpr std::size_t graded_check_step = 2;
+// A u whose graded_record::doubt times this exceeds the error asked for is solved again one level
+// finer: one in a thousand (none of them needlessly inaccurate, so far; see mesh.hpp).
+inline constexpr double graded_doubt = 0.005;
 
-// Where |phi| is small, this level is enough for most tolerances.
-inline constexpr std::size_t graded_coarse_level = 2;
+// |phi| is not solved further where it is below this share of the error asked for.
+inline constexpr double graded_negligible = 0.05;
 
-namespace detail {
-
-// int_0^T g0, the scale of rounding errors: an upper bound of int xi when curve and mean reversion
-// are not negative.
-inline double integrated_curve(const variance_curve& curve, double alpha, double maturity) {
-    const bool driven = curve.form == curve_form::driven;
-    double sum = driven ? curve.initial * maturity : 0.0;
-    for_each_reversed_piece(curve, maturity, [&](std::size_t k, double from, double to) {
-        const double level = std::abs(curve.levels[k]);
-        sum += driven ? level * (std::pow(to, alpha + 1) - std::pow(from, alpha + 1)) /
-                            std::tgamma(alpha + 2)
-                      : level * (to - from);
-    });
-    return sum;
-}
-
-// What |phi| will be at its largest maturity, roughly: psi from a rational function of z = t^alpha
-// with the right start and limit, log phi = (int g0) psi / z. Only chooses the level a u starts
-// from; solve_log_transform checks the outcome.
-inline double expected_size(const riccati_coefficients& c, std::span<const double> powers,
-                            std::span<const double> integrals) {
-    const std::complex<double> limit = std::sqrt(c.c1 * c.c1 - 4.0 * c.c0 * c.c2) - c.c1;
-    double decay = std::numeric_limits<double>::infinity();
-    for (const std::size_t t : {std::size_t{0}, powers.size() / 2, powers.size() - 1}) {
-        const double re = 1.0 + 0.5 * powers[t] * limit.real(), im = 0.5 * powers[t] * limit.imag();
-        const double real = (c.c0.real() * re + c.c0.imag() * im) / (re * re + im * im);
-        decay = std::min(decay, -integrals[t] * real);
-    }
-    return std::exp(-0.7 * std::max(decay, 0.0));
-}
-
-}  // namespace detail
-
-// log E[exp(iuX_T)] by the graded scheme, maturities x u, and the absolute error of phi for every
-// value when `errors` is not empty (its size is that of `values`). `bounds` (maturities x u) is the
-// error asked for. Maturities must ascend. Where no level converged, which is what happens past an
-// explosion time, the value is nan and its error inf.
+// log E[exp(iuX_T)] by the graded scheme, maturities x u. `bounds` (maturities x u) is the error of
+// phi asked for. Maturities must ascend. Returns the largest estimated error as a multiple of its
+// bound. Where no level converged, which is what happens past an explosion time, the value is nan.
 //
-// Each u is solved at the level its bound needs, coarser where |phi| is small at every maturity. With
-// errors it is solved a second time two levels finer, and again until the difference is below
-// the bound. Without, the level is trusted (see mesh.hpp for how often it errs).
-inline void solve_log_transform(const target_kernels& kernels, const model_parameters& m,
-                                const variance_curve& curve,
-                                std::span<const std::complex<double>> u,
-                                std::span<const double> maturities, std::span<const double> bounds,
-                                std::span<std::complex<double>> values, std::span<double> errors) {
+// With `errors` (the size of values) every u is solved a second time one level finer, and again until
+// the estimate is below the bound: errors holds the absolute error of phi, inf beside nan. Without, the
+// level is trusted where the indicator of the solver raises no doubt (see mesh.hpp for how often it
+// errs).
+inline double solve_log_transform(const target_kernels& kernels, const model_parameters& m,
+                                  const variance_curve& curve,
+                                  std::span<const std::complex<double>> u,
+                                  std::span<const double> maturities,
+                                  std::span<const double> bounds,
+                                  std::span<std::complex<double>> values,
+                                  std::span<double> errors) {
     const std::size_t n = u.size();
-    const double infinity = std::numeric_limits<double>::infinity();
-    std::vector<double> integrals, powers;
-    for (double t : maturities) {
-        integrals.push_back(detail::integrated_curve(curve, m.alpha(), t));
-        powers.push_back(std::pow(t, m.alpha()));
-    }
-    auto length = [](std::complex<double> z) { return std::sqrt(std::norm(z)); };
-    auto size_of = [&](std::complex<double> log_phi) {
-        return std::exp(log_phi.real()) * std::max(1.0, length(log_phi));
-    };
-
-    std::vector<std::size_t> level(n), base(n), which;
-    std::vector<double> bound(n, infinity);
-    std::vector<char> solved(n, 0), open(n, 1);
+    constexpr double infinity = std::numeric_limits<double>::infinity();
+    std::vector<std::size_t> level(n), which;
+    std::vector<double> bound(n, infinity), cut(n);
+    std::vector<char> open(n, 1);
     for (std::size_t t = 0; t < maturities.size(); ++t)
         for (std::size_t i = 0; i < n; ++i) bound[i] = std::min(bound[i], bounds[t * n + i]);
     for (std::size_t i = 0; i < n; ++i) {
-        base[i] = level[i] = graded_level_for(bound[i]);
-        // Two levels per call, so that two plans serve all u.
-        if (base[i] <= graded_coarse_level) continue;
-        const auto c = riccati(m, u[i]);
-        const double most = 0.7 * std::abs(c.c0) * integrals.front();
-        if (std::exp(-most) * graded_level_error(graded_coarse_level) < bound[i] &&
-            detail::expected_size(c, powers, integrals) *
-                    graded_level_error(graded_coarse_level) < bound[i])
-            level[i] = graded_coarse_level;
+        level[i] = i && bound[i] == bound[i - 1] ? level[i - 1] : graded_level_for(bound[i]);
+        cut[i] = i && bound[i] == bound[i - 1] ? cut[i - 1] : std::log(graded_negligible * bound[i]);
     }
-    // |exp(z) - 1|, to a tenth of a percent
-    auto change = [&](std::complex<double> z) {
-        const double size = length(z);
-        return size < 1e-3 ? size : std::abs(std::exp(z) - 1.0);
-    };
-    // Whether values[., i], solved at a level coarser than base[i], are good enough.
-    auto fine_enough = [&](std::size_t i) {
-        const double error = graded_level_error(level[i]);
-        const double clear = std::log(bound[i] / error) - 8.0;  // size_of < e^8 |phi| there
-        for (std::size_t t = 0; t < maturities.size(); ++t) {
-            const auto value = values[t * n + i];
-            if (value.real() < clear && std::abs(value.real()) + std::abs(value.imag()) < 2900.0)
-                continue;
-            if (size_of(value) * error > bound[i]) return false;
-        }
-        return true;
-    };
-    auto pass = [&](std::span<std::complex<double>> into) {
+    auto pass = [&](std::span<std::complex<double>> into, graded_record& record) {
         for (std::size_t l = 0; l < graded_levels; ++l) {
             which.clear();
             for (std::size_t i = 0; i < n; ++i)
                 if (open[i] && level[i] == l) which.push_back(i);
             if (!which.empty())
                 graded_pass(kernels, graded_ladder(m.hurst, l), m, curve, u, which, maturities,
-                            false, into, solved);
+                            false, cut, into, record);
         }
     };
+    graded_record coarse(n);
+    double worst = 0.0;
     for (bool again = true; again;) {
-        pass(values);
+        pass(values, coarse);
         again = false;
         for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
-            open[i] = level[i] + 1 < graded_levels &&
-                      (!solved[i] || (level[i] < base[i] && !fine_enough(i)));
+            const bool doubtful = errors.empty() && graded_doubt * coarse.doubt[i] > bound[i];
+            open[i] = (!coarse.solved[i] || doubtful) && level[i] + 1 < graded_levels;
             if (open[i])
-                level[i] = solved[i] ? base[i] : std::min(level[i] + 2, graded_levels - 1);
+                level[i] = std::min(level[i] + (coarse.solved[i] ? 1 : 2), graded_levels - 1);
+            else if (doubtful)
+                worst = std::max(worst, graded_doubt * coarse.doubt[i] / bound[i]);
             again |= open[i];
         }
     }
     for (std::size_t i = 0; i < n; ++i)
-        for (std::size_t t = 0; t < maturities.size() && !solved[i]; ++t)
+        for (std::size_t t = 0; t < maturities.size() && !coarse.solved[i]; ++t)
             values[t * n + i] = std::numeric_limits<double>::quiet_NaN();
-    if (errors.empty()) return;
+    if (errors.empty()) return worst;
+
+    std::vector<double> integrals;
+    for (double t : maturities) integrals.push_back(detail::integrated_curve(curve, m.alpha(), t));
+    // |exp(z) - 1|, to a tenth of a percent
+    auto change = [](std::complex<double> z) {
+        const double size = std::sqrt(std::norm(z));
+        return size < 1e-3 ? size : std::abs(std::exp(z) - 1.0);
+    };
     std::vector<std::complex<double>> finer(values.size());
+    graded_record fine(n);
+    std::vector<double> estimate(maturities.size());
     for (std::size_t i = 0; i < n; ++i) {
-        open[i] = solved[i];
-        level[i] = std::min(level[i] + graded_check_step, graded_levels - 1);
+        open[i] = coarse.solved[i];
+        level[i] = graded_next_level(m.hurst, level[i]);
         for (std::size_t t = 0; t < maturities.size(); ++t) errors[t * n + i] = infinity;
     }
     for (bool again = true; again;) {
-        pass(finer);
+        pass(finer, fine);
         again = false;
         for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
-            bool met = true;
-            if (solved[i]) {
-                // A difference can vanish by chance at one maturity, hardly at all of them.
-                double relative = 0.0;
-                for (std::size_t t = 0; t < maturities.size(); ++t)
-                    relative = std::max(relative, std::norm(values[t * n + i] - finer[t * n + i]) /
-                                                      std::max(1.0, std::norm(values[t * n + i])));
-                relative = std::sqrt(relative);
-                relative = 0.5 * relative + 0.06 * graded_level_error(level[i]);
+            open[i] = level[i] + 1 < graded_levels;
+            if (fine.solved[i]) {
+                // A difference can vanish by chance at one maturity, hardly at all of them: up to
+                // each one the relative error so far counts too, and what the next one shows.
+                const double least = 0.06 * graded_level_error(level[i]);
                 const double c0 = std::abs(riccati(m, u[i]).c0);
+                double relative = 0.0;
                 for (std::size_t t = 0; t < maturities.size(); ++t) {
                     const std::size_t at = t * n + i;
                     const double modulus = std::exp(values[at].real());
-                    const double size = length(values[at]);
+                    const double size = std::max(1.0, std::sqrt(std::norm(values[at])));
+                    const double difference = change(finer[at] - values[at]);
                     const double floor = 8.0 * std::numeric_limits<double>::epsilon() *
-                                         (c0 * integrals[t] + size + 1.0);
-                    errors[at] = modulus * (4.0 * change(finer[at] - values[at]) + floor +
-                                            relative * std::max(1.0, size));
-                    met = met && errors[at] <= bounds[at];
+                                         (c0 * integrals[t] + size);
+                    relative = std::max(relative, difference / size);
+                    estimate[t] = modulus * (4.0 * difference + (1.2 * relative + least) * size + floor);
+                    if (t) estimate[t - 1] += 0.3 * modulus * difference;
+                    if (maturities[t] > coarse.guessed_from[i])
+                        estimate[t] = std::max(estimate[t], 2.0 * coarse.guessed_size[i]);
                 }
-            }
-            open[i] = !(solved[i] && met) && level[i] + 1 < graded_levels;
-            if (!open[i]) continue;
-            if (solved[i])
+                double misses = 0.0;  // largest estimate as a multiple of its bound
                 for (std::size_t t = 0; t < maturities.size(); ++t)
-                    values[t * n + i] = finer[t * n + i];
+                    misses = std::max(misses, estimate[t] / bounds[t * n + i]);
+                // Keep what has the smallest estimate; the finer values are better than the estimate
+                // of the coarse ones by this factor at least.
+                constexpr double gain = 0.3;
+                const bool keep = misses <= 1.0;
+                double before = 0.0, now = 0.0;
+                for (std::size_t t = 0; t < maturities.size(); ++t) {
+                    const std::size_t at = t * n + i;
+                    before = std::max(before, errors[at] / bounds[at]);
+                    now = std::max(now, (keep ? 1.0 : gain) * estimate[t] / bounds[at]);
+                }
+                if (now < before)
+                    for (std::size_t t = 0; t < maturities.size(); ++t) {
+                        const std::size_t at = t * n + i;
+                        errors[at] = (keep ? 1.0 : gain) * estimate[t];
+                        if (!keep) values[at] = finer[at];
+                    }
+                open[i] = open[i] && !(std::min(now, before) <= 1.0);
+                if (!keep) coarse.guessed_from[i] = fine.guessed_from[i];
+                if (!keep) coarse.guessed_size[i] = fine.guessed_size[i];
+            }
+            if (!open[i]) continue;
             level[i] = std::min(level[i] + 2, graded_levels - 1);
             again = true;
         }
     }
+    for (std::size_t k = 0; k < errors.size(); ++k)
+        worst = std::max(worst, errors[k] / bounds[k]);
+    return worst;
 }
 
 }  // namespace volterra

@@ -110,4 +110,44 @@ inline void align_schur(double* s, double* q, std::size_t n) {
     }
 }
 
+// For an aligned real Schur form S, n even: the unit block upper triangular X with S X = X D, D the
+// diagonal blocks of S. Returns false if two blocks are too close for X to be moderate.
+inline bool block_eigenvectors(const double* s, double* x, std::size_t n) {
+    for (std::size_t i = 0; i < n * n; ++i) x[i] = i % (n + 1) == 0 ? 1.0 : 0.0;
+    for (std::size_t j = 2; j < n; j += 2)
+        for (std::size_t i = j; i >= 2;) {
+            i -= 2;
+            // S_ii Y - Y S_jj = -sum_k S_ik X_kj as four equations, Y row by row
+            double a[4][5] = {};
+            for (std::size_t r = 0; r < 2; ++r)
+                for (std::size_t c = 0; c < 2; ++c) {
+                    double* row = a[2 * r + c];
+                    for (std::size_t k = 0; k < 2; ++k) {
+                        row[2 * k + c] += s[(i + r) * n + i + k];
+                        row[2 * r + k] -= s[(j + k) * n + j + c];
+                    }
+                    for (std::size_t k = i + 2; k <= j + 1; ++k)
+                        row[4] -= s[(i + r) * n + k] * x[k * n + j + c];
+                }
+            for (std::size_t k = 0; k < 4; ++k) {
+                std::size_t best = k;
+                for (std::size_t r = k + 1; r < 4; ++r)
+                    if (std::abs(a[r][k]) > std::abs(a[best][k])) best = r;
+                for (std::size_t c = 0; c < 5; ++c) std::swap(a[k][c], a[best][c]);
+                if (a[k][k] == 0.0) return false;
+                for (std::size_t r = 0; r < 4; ++r) {
+                    if (r == k) continue;
+                    const double f = a[r][k] / a[k][k];
+                    for (std::size_t c = k; c < 5; ++c) a[r][c] -= f * a[k][c];
+                }
+            }
+            for (std::size_t r = 0; r < 4; ++r) {
+                const double y = a[r][4] / a[r][r];
+                if (!(std::abs(y) < 1e4)) return false;
+                x[(i + r / 2) * n + j + r % 2] = y;
+            }
+        }
+    return true;
+}
+
 }  // namespace volterra

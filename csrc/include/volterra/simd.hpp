@@ -59,6 +59,14 @@ VOLTERRA_INLINE pack load(const double* p) {
 VOLTERRA_INLINE void store(double* p, pack x) { std::memcpy(p, &x, sizeof x); }
 VOLTERRA_INLINE pack broadcast(double x) { return x - pack{}; }
 
+// 2 to the power of x rounded to an integer, |x| < 1000.
+VOLTERRA_INLINE pack power_of_two(pack x) {
+    typedef long long bits __attribute__((vector_size(sizeof(pack))));
+    const pack shifted = x + broadcast(6755399441055744.0);  // 1.5 x 2^52: the integer is in the low bits
+    const bits exponent = (reinterpret_cast<bits>(shifted) << 52) + 0x3ff0000000000000LL;
+    return reinterpret_cast<pack>(exponent);
+}
+
 // A pack of complex numbers, split into real and imaginary parts. std::complex is avoided: its
 // product calls a library routine for the sake of infinities and does not vectorise.
 struct complex_pack {

@@ -28,11 +28,12 @@ struct transform_options {
     std::size_t steps = 0;     // adams: exactly this many steps to each maturity; 0: by tolerance
     double tolerance = 1e-8;   // bound on |error of phi(u)| / phi(i Im u)
     std::size_t threads = 1;
+    bool estimate = true;      // whether the errors are wanted
 };
 
 struct transform_result {
     std::vector<std::complex<double>> values;  // maturities x u
-    std::vector<double> errors;                // absolute error of phi, same shape
+    std::vector<double> errors;                // absolute error of phi, same shape, or empty
     double worst_ratio = 0.0;  // largest error / (tolerance phi(i Im u)); above 1: tolerance missed
 };
 
@@ -48,7 +49,7 @@ public:
           options_(options), closed_form_(options.method == scheme::automatic && m.hurst == 0.5) {
         const std::size_t size = u.size() * maturities.size();
         result.values.resize(size);
-        result.errors.assign(size, 0.0);
+        if (needs_errors()) result.errors.assign(size, 0.0);
         bounds_.assign(size, options.tolerance);
         largest_.assign(size, 1.0);
     }
@@ -62,9 +63,10 @@ public:
             for (std::size_t t = 0; t < maturities_.size(); ++t) solve_uniform(t);
         else
             solve_on_graded_mesh();
-        for (std::size_t i = 0; i < bounds_.size(); ++i) {
+        constexpr double infinity = std::numeric_limits<double>::infinity();
+        for (std::size_t i = 0; i < result.errors.size(); ++i) {
             if (std::isnan(result.values[i].real()) || std::isnan(result.errors[i]))
-                result.errors[i] = std::numeric_limits<double>::infinity();
+                result.errors[i] = infinity;
             result.worst_ratio = std::max(result.worst_ratio, result.errors[i] / bounds_[i]);
         }
     }
@@ -72,23 +74,46 @@ public:
     transform_result result;
 
 private:
+    // The graded scheme can do without: it trusts its mesh where the solver raises no doubt.
+    bool needs_errors() const {
+        return options_.estimate || closed_form_ || options_.method == scheme::adams;
+    }
+
     std::size_t at(std::size_t t, std::size_t i) const { return t * u_.size() + i; }
 
     // The tolerance is relative to phi(i Im u), which is 1 on the real axis; on the way every
     // moment is checked to be finite.
     void scale_bounds() {
-        std::map<double, std::size_t> moments;
+        std::map<double, std::size_t> moments;  // Im u -> position on the axis, or `inside`
+        constexpr std::size_t inside = std::numeric_limits<std::size_t>::max();
+        const double longest =
+            detail::integrated_curve(curve_, m_.alpha(), maturities_.back());
         std::vector<complex> axis;
-        for (const auto& z : u_)
-            if (moments.try_emplace(z.imag(), axis.size()).second) axis.emplace_back(0.0, z.imag());
-        for (const auto& [y, position] : moments)
+        for (const auto& z : u_) {
+            const double y = z.imag();
+            if (y == 0.0 || y == -1.0) continue;  // E[1] = E[exp X] = 1
+            const auto [entry, is_new] = moments.try_emplace(y, inside);
+            if (!is_new) continue;
             for (double maturity : maturities_) require_finite_moment(m_, -y, maturity);
+            // Between the two, exp(p E[X]) <= E[exp(pX)] <= 1, p = -Im u, E[X] >= -int g0 / 2.
+            if (-1.0 < y && y < 0.0 && -y * longest < 0.1) continue;
+            entry->second = axis.size();
+            axis.emplace_back(0.0, y);
+        }
+        if (moments.empty()) return;
+        constexpr double least_inside = 0.95;  // exp(-0.1 / 2)
+        std::size_t position = inside;
         const auto sizes = rough_values(axis);
         for (std::size_t t = 0; t < maturities_.size(); ++t)
             for (std::size_t i = 0; i < u_.size(); ++i) {
                 const double y = u_[i].imag();
-                if (y == 0.0 || y == -1.0) continue;  // E[1] = E[exp X] = 1
-                largest_[at(t, i)] = std::exp(sizes[t * axis.size() + moments[y]].real());
+                if (y == 0.0 || y == -1.0) continue;
+                if (i == 0 || y != u_[i - 1].imag()) position = moments[y];
+                if (position == inside) {
+                    bounds_[at(t, i)] *= least_inside;
+                    continue;
+                }
+                largest_[at(t, i)] = std::exp(sizes[t * axis.size() + position].real());
                 bounds_[at(t, i)] *= largest_[at(t, i)];
             }
     }
@@ -96,6 +121,7 @@ private:
     // Values good to a few digits, for scales.
     std::vector<complex> rough_values(std::span<const complex> u) const {
         std::vector<complex> values(maturities_.size() * u.size());
+        if (values.empty()) return values;
         if (closed_form_) {
             for (std::size_t t = 0; t < maturities_.size(); ++t)
                 for (std::size_t i = 0; i < u.size(); ++i)
@@ -140,19 +166,25 @@ private:
     }
 
     void solve_on_graded_mesh() {
-        solve_log_transform(kernels_, m_, curve_, u_, maturities_, bounds_, result.values,
-                            result.errors);
+        result.worst_ratio = solve_log_transform(kernels_, m_, curve_, u_, maturities_, bounds_,
+                                                 result.values, result.errors);
         // A u that no mesh could solve goes to the uniform scheme, with that scheme's error.
-        for (std::size_t i = 0; i < u_.size(); ++i)
-            for (std::size_t t = 0; t < maturities_.size(); ++t)
-                if (!(result.errors[at(t, i)] < std::numeric_limits<double>::infinity()) ||
-                    std::isnan(result.values[at(t, i)].real())) {
-                    adams_to_tolerance(kernels_, m_, curve_, u_.subspan(i, 1), maturities_[t],
-                                       {&bounds_[at(t, i)], 1}, {&largest_[at(t, i)], 1},
-                                       {&result.values[at(t, i)], 1},
-                                       {&result.errors[at(t, i)], 1});
-                    result.errors[at(t, i)] += rounding_error(t, i);
-                }
+        for (std::size_t k = 0; k < result.values.size(); ++k) {
+            if (!std::isnan(result.values[k].real()) &&
+                (result.errors.empty() || !std::isinf(result.errors[k])))
+                continue;
+            const std::size_t t = k / u_.size(), i = k % u_.size();
+            double error = 0.0;
+            adams_to_tolerance(kernels_, m_, curve_, u_.subspan(i, 1), maturities_[t],
+                               {&bounds_[k], 1}, {&largest_[k], 1}, {&result.values[k], 1},
+                               {&error, 1});
+            error += rounding_error(t, i);
+            if (!result.errors.empty()) result.errors[k] = error;
+            const double ratio = std::isnan(result.values[k].real())
+                                     ? std::numeric_limits<double>::infinity()
+                                     : error / bounds_[k];
+            result.worst_ratio = ratio <= result.worst_ratio ? result.worst_ratio : ratio;
+        }
     }
 
     // log phi is a sum of terms of size |c0| int xi, each with a relative error of some ulp.
@@ -195,7 +227,7 @@ inline transform_result log_transform(const target_kernels& kernels, const model
     const std::size_t n = u.size();
     transform_result result;
     result.values.resize(maturities.size() * n);
-    result.errors.resize(maturities.size() * n);
+    if (options.estimate) result.errors.resize(maturities.size() * n);
     std::atomic<double> worst{0.0};
     constexpr std::size_t least = 64;  // u: below that a thread costs more than it saves
     for_each_part(n, options.threads, least, [&](std::size_t begin, std::size_t end) {
@@ -203,10 +235,12 @@ inline transform_result log_transform(const target_kernels& kernels, const model
                                   options);
         request.run();
         const auto& part = request.result;
+        const bool estimated = options.estimate;
         for (std::size_t t = 0; t < rows.size(); ++t) {
             const std::size_t from = rows[t] * (end - begin), to = t * n + begin;
             std::copy_n(part.values.data() + from, end - begin, result.values.data() + to);
-            std::copy_n(part.errors.data() + from, end - begin, result.errors.data() + to);
+            if (estimated)
+                std::copy_n(part.errors.data() + from, end - begin, result.errors.data() + to);
         }
         for (double seen = worst; seen < part.worst_ratio;)
             if (worst.compare_exchange_weak(seen, part.worst_ratio)) break;
