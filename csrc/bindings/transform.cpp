@@ -28,18 +28,19 @@ py::tuple transform(const py::tuple& model, const py::tuple& curve, const py::ar
     const auto nodes = input<complex>(u, "u");
     const auto times = input<double>(maturities, "maturities");
     const transform_options options{to_scheme(method), steps, tolerance, threads, estimate};
-    transform_result result;
-    {
-        py::gil_scoped_release release;  // safe: only C++ copies and arrays held by the caller
-        result = log_transform(selected_kernels(), m, c, nodes, times, options);
-    }
     const auto rows = static_cast<py::ssize_t>(times.size());
     const auto columns = static_cast<py::ssize_t>(nodes.size());
     auto values = owning<complex>({rows, columns});
     auto errors = owning<double>({estimate ? rows : 0, columns});
-    std::copy(result.values.begin(), result.values.end(), output(values).begin());
-    std::copy(result.errors.begin(), result.errors.end(), output(errors).begin());
-    return py::make_tuple(values, errors, result.worst_ratio);
+    const auto to_values = output(values);
+    const auto to_errors = output(errors);
+    double worst = 0.0;
+    {
+        py::gil_scoped_release release;  // safe: only C++ copies and arrays held by the caller
+        worst = log_transform_into(selected_kernels(), m, c, nodes, times, options, to_values,
+                                   to_errors);
+    }
+    return py::make_tuple(values, errors, worst);
 }
 
 py::array_t<complex> adams_solution(const py::tuple& model, const py::array& u, double horizon,

@@ -28,7 +28,8 @@ static std::vector<complex> solve(const target_kernels& kernels, const model_par
                                   const std::vector<double>& maturities, double tolerance,
                                   std::vector<double>* errors = nullptr) {
     std::vector<complex> values(u.size() * maturities.size());
-    std::vector<double> bounds(values.size(), tolerance);
+    const error_bounds bounds{1, std::vector<std::uint32_t>(u.size(), 0),
+                              std::vector<double>(maturities.size(), tolerance)};
     if (errors) errors->assign(values.size(), 0.0);
     solve_log_transform(kernels, m, curve, u, maturities, bounds, values,
                         errors ? std::span<double>(*errors) : std::span<double>());

@@ -9,6 +9,7 @@
 #include <cmath>
 #include <complex>
 #include <cstddef>
+#include <cstdint>
 #include <limits>
 #include <span>
 #include <vector>
@@ -185,8 +186,16 @@ inline constexpr double graded_doubt = 0.005;
 // |phi| is not solved further where it is below this share of the error asked for.
 inline constexpr double graded_negligible = 0.05;
 
-// log E[exp(iuX_T)] by the graded scheme, maturities x u. `bounds` (maturities x u) is the error of
-// phi asked for. Maturities must ascend. Returns the largest estimated error as a multiple of its
+// The error of phi asked for: one per maturity and line, a line being the u of one imaginary part.
+struct error_bounds {
+    std::size_t lines = 0;
+    std::vector<std::uint32_t> line;  // of each u
+    std::vector<double> bound;        // maturities x lines
+
+    double operator()(std::size_t t, std::size_t i) const { return bound[t * lines + line[i]]; }
+};
+
+// log E[exp(iuX_T)] by the graded scheme, maturities x u. Maturities must ascend. Returns the largest estimated error as a multiple of its
 // bound. Where no level converged, which is what happens past an explosion time, the value is nan.
 //
 // With `errors` (the size of values) every u is solved a second time one level finer, and again until
@@ -197,7 +206,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                                   const variance_curve& curve,
                                   std::span<const std::complex<double>> u,
                                   std::span<const double> maturities,
-                                  std::span<const double> bounds,
+                                  const error_bounds& bounds,
                                   std::span<std::complex<double>> values,
                                   std::span<double> errors) {
     const std::size_t n = u.size();
@@ -205,11 +214,15 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
     std::vector<std::size_t> level(n), which;
     std::vector<double> bound(n, infinity), cut(n);
     std::vector<char> open(n, 1);
-    for (std::size_t t = 0; t < maturities.size(); ++t)
-        for (std::size_t i = 0; i < n; ++i) bound[i] = std::min(bound[i], bounds[t * n + i]);
     for (std::size_t i = 0; i < n; ++i) {
-        level[i] = i && bound[i] == bound[i - 1] ? level[i - 1] : graded_level_for(bound[i]);
-        cut[i] = i && bound[i] == bound[i - 1] ? cut[i - 1] : std::log(graded_negligible * bound[i]);
+        if (i && bounds.line[i] == bounds.line[i - 1]) {
+            bound[i] = bound[i - 1], level[i] = level[i - 1], cut[i] = cut[i - 1];
+            continue;
+        }
+        for (std::size_t t = 0; t < maturities.size(); ++t)
+            bound[i] = std::min(bound[i], bounds(t, i));
+        level[i] = graded_level_for(bound[i]);
+        cut[i] = std::log(graded_negligible * bound[i]);
     }
     auto pass = [&](std::span<std::complex<double>> into, graded_record& record) {
         for (std::size_t l = 0; l < graded_levels; ++l) {
@@ -284,7 +297,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                 }
                 double misses = 0.0;  // largest estimate as a multiple of its bound
                 for (std::size_t t = 0; t < maturities.size(); ++t)
-                    misses = std::max(misses, estimate[t] / bounds[t * n + i]);
+                    misses = std::max(misses, estimate[t] / bounds(t, i));
                 // Keep what has the smallest estimate; the finer values are better than the estimate
                 // of the coarse ones by this factor at least.
                 constexpr double gain = 0.3;
@@ -292,8 +305,8 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                 double before = 0.0, now = 0.0;
                 for (std::size_t t = 0; t < maturities.size(); ++t) {
                     const std::size_t at = t * n + i;
-                    before = std::max(before, errors[at] / bounds[at]);
-                    now = std::max(now, (keep ? 1.0 : gain) * estimate[t] / bounds[at]);
+                    before = std::max(before, errors[at] / bounds(t, i));
+                    now = std::max(now, (keep ? 1.0 : gain) * estimate[t] / bounds(t, i));
                 }
                 if (now < before)
                     for (std::size_t t = 0; t < maturities.size(); ++t) {
@@ -310,8 +323,10 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
             again = true;
         }
     }
-    for (std::size_t k = 0; k < errors.size(); ++k)
-        worst = std::max(worst, errors[k] / bounds[k]);
+    for (std::size_t t = 0; t < maturities.size(); ++t)
+        for (std::size_t i = 0; i < n; ++i)
+            if (!std::isnan(values[t * n + i].real()))
+                worst = std::max(worst, errors[t * n + i] / bounds(t, i));
     return worst;
 }
 

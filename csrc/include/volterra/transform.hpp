@@ -6,6 +6,7 @@
 #include <cmath>
 #include <complex>
 #include <cstddef>
+#include <cstdint>
 #include <limits>
 #include <map>
 #include <span>
@@ -37,25 +38,22 @@ struct transform_result {
     double worst_ratio = 0.0;  // largest error / (tolerance phi(i Im u)); above 1: tolerance missed
 };
 
-// One request in progress: maturities ascend, every array is maturities x u.
+// One request in progress: maturities ascend, every array is maturities x u. `errors` may be empty
+// if no estimate is asked for.
 class transform_request {
 public:
     using complex = std::complex<double>;
 
     transform_request(const target_kernels& kernels, const model_parameters& m,
                       const variance_curve& curve, std::span<const complex> u,
-                      std::span<const double> maturities, const transform_options& options)
+                      std::span<const double> maturities, const transform_options& options,
+                      std::span<complex> values, std::span<double> errors)
         : kernels_(kernels), m_(m), curve_(curve), u_(u), maturities_(maturities),
-          options_(options), closed_form_(options.method == scheme::automatic && m.hurst == 0.5) {
-        const std::size_t size = u.size() * maturities.size();
-        result.values.resize(size);
-        if (needs_errors()) result.errors.assign(size, 0.0);
-        bounds_.assign(size, options.tolerance);
-        largest_.assign(size, 1.0);
-    }
+          options_(options), values_(values), errors_(errors),
+          closed_form_(options.method == scheme::automatic && m.hurst == 0.5) {}
 
-    void run() {
-        if (result.values.empty()) return;
+    // Returns the largest error as a multiple of its bound.
+    double run() {
         scale_bounds();
         if (closed_form_)
             solve_closed_form();
@@ -63,59 +61,61 @@ public:
             for (std::size_t t = 0; t < maturities_.size(); ++t) solve_uniform(t);
         else
             solve_on_graded_mesh();
-        constexpr double infinity = std::numeric_limits<double>::infinity();
-        for (std::size_t i = 0; i < result.errors.size(); ++i) {
-            if (std::isnan(result.values[i].real()) || std::isnan(result.errors[i]))
-                result.errors[i] = infinity;
-            result.worst_ratio = std::max(result.worst_ratio, result.errors[i] / bounds_[i]);
-        }
+        return worst_;
     }
-
-    transform_result result;
 
 private:
-    // The graded scheme can do without: it trusts its mesh where the solver raises no doubt.
-    bool needs_errors() const {
-        return options_.estimate || closed_form_ || options_.method == scheme::adams;
-    }
-
     std::size_t at(std::size_t t, std::size_t i) const { return t * u_.size() + i; }
+
+    // Takes note of the error of one value.
+    void record(std::size_t t, std::size_t i, double error) {
+        const std::size_t k = at(t, i);
+        if (std::isnan(values_[k].real()) || std::isnan(error))
+            error = std::numeric_limits<double>::infinity();
+        if (!errors_.empty()) errors_[k] = error;
+        worst_ = std::max(worst_, error / bounds_(t, i));
+    }
 
     // The tolerance is relative to phi(i Im u), which is 1 on the real axis; on the way every
     // moment is checked to be finite.
     void scale_bounds() {
-        std::map<double, std::size_t> moments;  // Im u -> position on the axis, or `inside`
-        constexpr std::size_t inside = std::numeric_limits<std::size_t>::max();
-        const double longest =
-            detail::integrated_curve(curve_, m_.alpha(), maturities_.back());
+        const double longest = detail::integrated_curve(curve_, m_.alpha(), maturities_.back());
+        std::map<double, std::uint32_t> lines;  // Im u -> line
         std::vector<complex> axis;
-        for (const auto& z : u_) {
-            const double y = z.imag();
-            if (y == 0.0 || y == -1.0) continue;  // E[1] = E[exp X] = 1
-            const auto [entry, is_new] = moments.try_emplace(y, inside);
+        std::vector<double> fixed;  // scale of each line, 0 where it has to be computed
+        bounds_.line.reserve(u_.size());
+        for (std::size_t i = 0; i < u_.size(); ++i) {
+            const double y = u_[i].imag();
+            if (i && y == u_[i - 1].imag()) {
+                bounds_.line.push_back(bounds_.line.back());
+                continue;
+            }
+            const auto [entry, is_new] =
+                lines.try_emplace(y, static_cast<std::uint32_t>(lines.size()));
+            bounds_.line.push_back(entry->second);
             if (!is_new) continue;
-            for (double maturity : maturities_) require_finite_moment(m_, -y, maturity);
+            const bool known = y == 0.0 || y == -1.0;  // E[1] = E[exp X] = 1
+            for (std::size_t t = 0; t < maturities_.size() && !known; ++t)
+                require_finite_moment(m_, -y, maturities_[t]);
             // Between the two, exp(p E[X]) <= E[exp(pX)] <= 1, p = -Im u, E[X] >= -int g0 / 2.
-            if (-1.0 < y && y < 0.0 && -y * longest < 0.1) continue;
-            entry->second = axis.size();
-            axis.emplace_back(0.0, y);
+            const bool close = -1.0 < y && y < 0.0 && -y * longest < 0.1;
+            fixed.push_back(known ? 1.0 : close ? 0.95 : 0.0);
+            if (fixed.back() == 0.0) axis.emplace_back(0.0, y);
         }
-        if (moments.empty()) return;
-        constexpr double least_inside = 0.95;  // exp(-0.1 / 2)
-        std::size_t position = inside;
+        bounds_.lines = fixed.size();
         const auto sizes = rough_values(axis);
         for (std::size_t t = 0; t < maturities_.size(); ++t)
-            for (std::size_t i = 0; i < u_.size(); ++i) {
-                const double y = u_[i].imag();
-                if (y == 0.0 || y == -1.0) continue;
-                if (i == 0 || y != u_[i - 1].imag()) position = moments[y];
-                if (position == inside) {
-                    bounds_[at(t, i)] *= least_inside;
-                    continue;
-                }
-                largest_[at(t, i)] = std::exp(sizes[t * axis.size() + position].real());
-                bounds_[at(t, i)] *= largest_[at(t, i)];
+            for (std::size_t l = 0, k = 0; l < fixed.size(); ++l) {
+                largest_.push_back(fixed[l] > 0.0
+                                       ? 1.0
+                                       : std::exp(sizes[t * axis.size() + k++].real()));
+                bounds_.bound.push_back(options_.tolerance *
+                                        (fixed[l] > 0.0 ? fixed[l] : largest_.back()));
             }
+    }
+
+    double largest(std::size_t t, std::size_t i) const {
+        return largest_[t * bounds_.lines + bounds_.line[i]];
     }
 
     // Values good to a few digits, for scales.
@@ -128,8 +128,9 @@ private:
                     values[t * u.size() + i] = classical(u[i], maturities_[t]);
             return values;
         }
-        const std::vector<double> bounds(values.size(), 1e-3);
-        solve_log_transform(kernels_, m_, curve_, u, maturities_, bounds, values, {});
+        const error_bounds rough{1, std::vector<std::uint32_t>(u.size(), 0),
+                                 std::vector<double>(maturities_.size(), 1e-3)};
+        solve_log_transform(kernels_, m_, curve_, u, maturities_, rough, values, {});
         return values;
     }
 
@@ -146,51 +147,45 @@ private:
     void solve_closed_form() {
         for (std::size_t t = 0; t < maturities_.size(); ++t)
             for (std::size_t i = 0; i < u_.size(); ++i) {
-                result.values[at(t, i)] = classical(u_[i], maturities_[t]);
-                result.errors[at(t, i)] = rounding_error(t, i);
+                values_[at(t, i)] = classical(u_[i], maturities_[t]);
+                record(t, i, rounding_error(t, i));
             }
     }
 
     void solve_uniform(std::size_t t) {
-        const std::span<complex> values(result.values.data() + at(t, 0), u_.size());
-        const std::span<double> errors(result.errors.data() + at(t, 0), u_.size());
-        const std::span<const double> bounds(bounds_.data() + at(t, 0), u_.size());
-        const std::span<const double> largest(largest_.data() + at(t, 0), u_.size());
+        const std::span<complex> values(values_.data() + at(t, 0), u_.size());
+        std::vector<double> errors(u_.size()), bounds, most;
+        for (std::size_t i = 0; i < u_.size(); ++i) {
+            bounds.push_back(bounds_(t, i));
+            most.push_back(largest(t, i));
+        }
         if (options_.steps)
-            adams_with_error(kernels_, m_, curve_, u_, maturities_[t], options_.steps, largest,
-                             values, errors);
+            adams_with_error(kernels_, m_, curve_, u_, maturities_[t], options_.steps, most, values,
+                             errors);
         else
-            adams_to_tolerance(kernels_, m_, curve_, u_, maturities_[t], bounds, largest, values,
+            adams_to_tolerance(kernels_, m_, curve_, u_, maturities_[t], bounds, most, values,
                                errors);
-        for (std::size_t i = 0; i < u_.size(); ++i) errors[i] += rounding_error(t, i);
+        for (std::size_t i = 0; i < u_.size(); ++i) record(t, i, errors[i] + rounding_error(t, i));
     }
 
     void solve_on_graded_mesh() {
-        result.worst_ratio = solve_log_transform(kernels_, m_, curve_, u_, maturities_, bounds_,
-                                                 result.values, result.errors);
+        worst_ = solve_log_transform(kernels_, m_, curve_, u_, maturities_, bounds_, values_, errors_);
         // A u that no mesh could solve goes to the uniform scheme, with that scheme's error.
-        for (std::size_t k = 0; k < result.values.size(); ++k) {
-            if (!std::isnan(result.values[k].real()) &&
-                (result.errors.empty() || !std::isinf(result.errors[k])))
-                continue;
+        for (std::size_t k = 0; k < values_.size(); ++k) {
+            if (!std::isnan(values_[k].real())) continue;
             const std::size_t t = k / u_.size(), i = k % u_.size();
+            const double bound = bounds_(t, i), most = largest(t, i);
             double error = 0.0;
-            adams_to_tolerance(kernels_, m_, curve_, u_.subspan(i, 1), maturities_[t],
-                               {&bounds_[k], 1}, {&largest_[k], 1}, {&result.values[k], 1},
-                               {&error, 1});
-            error += rounding_error(t, i);
-            if (!result.errors.empty()) result.errors[k] = error;
-            const double ratio = std::isnan(result.values[k].real())
-                                     ? std::numeric_limits<double>::infinity()
-                                     : error / bounds_[k];
-            result.worst_ratio = ratio <= result.worst_ratio ? result.worst_ratio : ratio;
+            adams_to_tolerance(kernels_, m_, curve_, u_.subspan(i, 1), maturities_[t], {&bound, 1},
+                               {&most, 1}, values_.subspan(k, 1), {&error, 1});
+            record(t, i, error + rounding_error(t, i));
         }
     }
 
     // log phi is a sum of terms of size |c0| int xi, each with a relative error of some ulp.
     double rounding_error(std::size_t t, std::size_t i) const {
         constexpr double ulp = std::numeric_limits<double>::epsilon();
-        const complex value = result.values[at(t, i)];
+        const complex value = values_[at(t, i)];
         const double size =
             std::abs(riccati(m_, u_[i]).c0) *
                 detail::integrated_curve(curve_, m_.alpha(), maturities_[t]) +
@@ -204,18 +199,28 @@ private:
     std::span<const complex> u_;
     std::span<const double> maturities_;
     transform_options options_;
+    std::span<complex> values_;
+    std::span<double> errors_;
     bool closed_form_;
-    std::vector<double> bounds_;
-    std::vector<double> largest_;  // phi(i Im u) >= |phi(u)|
+    double worst_ = 0.0;
+    error_bounds bounds_;
+    std::vector<double> largest_;  // phi(i Im u) >= |phi(u)|, maturities x lines
 };
+
+// The u of one request: enough to fill the lanes, few enough to keep the working memory small.
+inline constexpr std::size_t transform_chunk = 2048;
 
 // Maturities in any order, repetitions allowed. With more than one thread the u are shared out;
 // as no value depends on its companions, the bits are the same for any number of threads.
-inline transform_result log_transform(const target_kernels& kernels, const model_parameters& m,
-                                      const variance_curve& curve,
-                                      std::span<const std::complex<double>> u,
-                                      std::span<const double> maturities,
-                                      const transform_options& options) {
+// Returns the largest error as a multiple of its bound; `errors` may be empty.
+inline double log_transform_into(const target_kernels& kernels, const model_parameters& m,
+                                 const variance_curve& curve,
+                                 std::span<const std::complex<double>> u,
+                                 std::span<const double> maturities,
+                                 const transform_options& options,
+                                 std::span<std::complex<double>> values,
+                                 std::span<double> errors) {
+    if (values.empty()) return 0.0;
     std::vector<double> ascending(maturities.begin(), maturities.end());
     std::sort(ascending.begin(), ascending.end());
     ascending.erase(std::unique(ascending.begin(), ascending.end()), ascending.end());
@@ -223,29 +228,49 @@ inline transform_result log_transform(const target_kernels& kernels, const model
     for (double maturity : maturities)
         rows.push_back(static_cast<std::size_t>(
             std::lower_bound(ascending.begin(), ascending.end(), maturity) - ascending.begin()));
+    const bool in_place = std::equal(ascending.begin(), ascending.end(), maturities.begin(),
+                                     maturities.end());
 
     const std::size_t n = u.size();
-    transform_result result;
-    result.values.resize(maturities.size() * n);
-    if (options.estimate) result.errors.resize(maturities.size() * n);
     std::atomic<double> worst{0.0};
     constexpr std::size_t least = 64;  // u: below that a thread costs more than it saves
-    for_each_part(n, options.threads, least, [&](std::size_t begin, std::size_t end) {
-        transform_request request(kernels, m, curve, u.subspan(begin, end - begin), ascending,
-                                  options);
-        request.run();
-        const auto& part = request.result;
-        const bool estimated = options.estimate;
-        for (std::size_t t = 0; t < rows.size(); ++t) {
-            const std::size_t from = rows[t] * (end - begin), to = t * n + begin;
-            std::copy_n(part.values.data() + from, end - begin, result.values.data() + to);
-            if (estimated)
-                std::copy_n(part.errors.data() + from, end - begin, result.errors.data() + to);
+    for_each_part(n, options.threads, least, [&](std::size_t part_begin, std::size_t part_end) {
+        std::vector<std::complex<double>> part_values;
+        std::vector<double> part_errors;
+        for (std::size_t begin = part_begin; begin < part_end; begin += transform_chunk) {
+            const std::size_t size = std::min(part_end - begin, transform_chunk);
+            const bool whole = in_place && size == n;
+            if (!whole) {
+                part_values.resize(ascending.size() * size);
+                part_errors.resize(errors.empty() ? 0 : part_values.size());
+            }
+            transform_request request(kernels, m, curve, u.subspan(begin, size), ascending, options,
+                                      whole ? values : std::span(part_values),
+                                      whole ? errors : std::span(part_errors));
+            const double ratio = request.run();
+            for (double seen = worst; !(ratio <= seen);)
+                if (worst.compare_exchange_weak(seen, ratio)) break;
+            for (std::size_t t = 0; !whole && t < rows.size(); ++t) {
+                const std::size_t from = rows[t] * size, to = t * n + begin;
+                std::copy_n(part_values.data() + from, size, values.data() + to);
+                if (!errors.empty())
+                    std::copy_n(part_errors.data() + from, size, errors.data() + to);
+            }
         }
-        for (double seen = worst; seen < part.worst_ratio;)
-            if (worst.compare_exchange_weak(seen, part.worst_ratio)) break;
     });
-    result.worst_ratio = worst;
+    return worst;
+}
+
+inline transform_result log_transform(const target_kernels& kernels, const model_parameters& m,
+                                      const variance_curve& curve,
+                                      std::span<const std::complex<double>> u,
+                                      std::span<const double> maturities,
+                                      const transform_options& options) {
+    transform_result result;
+    result.values.resize(maturities.size() * u.size());
+    if (options.estimate) result.errors.resize(result.values.size());
+    result.worst_ratio = log_transform_into(kernels, m, curve, u, maturities, options,
+                                            result.values, result.errors);
     return result;
 }
 
