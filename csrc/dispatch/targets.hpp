@@ -5,6 +5,7 @@
 
 #include "volterra/adams.hpp"
 #include "volterra/graded.hpp"
+#include "volterra/sum_series.hpp"
 
 namespace volterra {
 
@@ -14,6 +15,8 @@ struct target_kernels {
     void (*solve_adams_block)(const adams_block&);
     std::size_t graded_lanes;
     void (*solve_graded_block)(const graded_block&);
+    void (*sum_series)(const double* series, std::size_t stride, std::size_t terms,
+                       const double* factor, std::size_t count, double* sum);
 };
 
 extern const target_kernels kernels_baseline;

@@ -5,6 +5,8 @@
 // Measured error of the series: below 1e-15 relative to the row sums.
 #pragma once
 
+#include <algorithm>
+#include <array>
 #include <cmath>
 #include <cstddef>
 #include <map>
@@ -13,6 +15,7 @@
 #include <utility>
 #include <vector>
 
+#include "targets.hpp"
 #include "volterra/graded_limits.hpp"
 #include "volterra/graded_weights.hpp"
 #include "volterra/real_schur.hpp"
@@ -99,15 +102,27 @@ struct graded_plan {
 
 namespace detail {
 
-// to = l r, l and `to` column-major m x m and m x width, r row-major with rows `stride` apart.
-inline void product(const double* l, const double* r, std::size_t m, std::size_t width,
-                    std::size_t stride, double factor, double* to) {
+// to = factor l r, l and `to` column-major m x m and m x width, r row-major, its rows `stride` apart.
+template <std::size_t m>
+inline void product_of(const double* l, const double* r, std::size_t width, std::size_t stride,
+                       double factor, double* to) {
     for (std::size_t j = 0; j < width; ++j) {
-        for (std::size_t i = 0; i < m; ++i) to[j * m + i] = 0.0;
+        double sum[m] = {};
         for (std::size_t k = 0; k < m; ++k) {
             const double g = factor * r[k * stride + j];
-            for (std::size_t i = 0; i < m; ++i) to[j * m + i] += l[k * m + i] * g;
+            for (std::size_t i = 0; i < m; ++i) sum[i] += l[k * m + i] * g;
         }
+        for (std::size_t i = 0; i < m; ++i) to[j * m + i] = sum[i];
+    }
+}
+
+inline void product(const double* l, const double* r, std::size_t m, std::size_t width,
+                    std::size_t stride, double factor, double* to) {
+    switch (m) {
+        case 4: return product_of<4>(l, r, width, stride, factor, to);
+        case 6: return product_of<6>(l, r, width, stride, factor, to);
+        case 8: return product_of<8>(l, r, width, stride, factor, to);
+        case 10: return product_of<10>(l, r, width, stride, factor, to);
     }
 }
 
@@ -141,7 +156,12 @@ inline graded_operator make_operator(const double* own, std::size_t m, std::size
     }
     op.s = inverse;
     std::vector<double> q(m * m), x(m * m);  // row-major
-    op.paired = real_schur(op.s.data(), q.data(), m);
+    switch (m) {
+        case 4: op.paired = real_schur<4>(op.s.data(), q.data()); break;
+        case 6: op.paired = real_schur<6>(op.s.data(), q.data()); break;
+        case 8: op.paired = real_schur<8>(op.s.data(), q.data()); break;
+        case 10: op.paired = real_schur<10>(op.s.data(), q.data()); break;
+    }
     align_schur(op.s.data(), q.data(), m);
     for (std::size_t i = 2; i < m; i += 2) op.paired &= op.s[i * m + i - 1] == 0.0;
     op.to_basis = q;  // B^-1 = Q^T row-major is Q column-major, and the other way round
@@ -169,7 +189,8 @@ inline graded_operator make_operator(const double* own, std::size_t m, std::size
 }
 }  // namespace detail
 
-inline graded_plan make_graded_plan(double alpha, const graded_table& table, std::size_t elements) {
+inline graded_plan make_graded_plan(const target_kernels& kernels, double alpha,
+                                    const graded_table& table, std::size_t elements) {
     const graded_shape& shape = *table.shape;
     const std::size_t m = shape.m, n1 = m + 1;
     graded_plan plan{};
@@ -177,15 +198,12 @@ inline graded_plan make_graded_plan(double alpha, const graded_table& table, std
     plan.step_scale = std::exp(alpha * shape.log_q);
 
     const std::size_t count = graded_table::size(m, elements);
-    std::vector<double> values(count, 0.0);
-    double before = 0.0, chebyshev = 1.0;
-    const double x = (alpha - 0.75) / 0.25;
-    for (std::size_t n = 0; n < graded_table::terms; ++n) {
-        const double* from = &table.series[n * table.numbers];
-        for (std::size_t i = 0; i < count; ++i) values[i] += chebyshev * from[i];
-        const double next = n ? 2 * x * chebyshev - before : x;
-        before = chebyshev, chebyshev = next;
-    }
+    std::vector<double> values(count);
+    double chebyshev[graded_table::terms] = {1.0, (alpha - 0.75) / 0.25};
+    for (std::size_t n = 2; n < graded_table::terms; ++n)
+        chebyshev[n] = 2.0 * chebyshev[1] * chebyshev[n - 1] - chebyshev[n - 2];
+    kernels.sum_series(table.series.data(), table.numbers, graded_table::terms, chebyshev, count,
+                       values.data());
     const double* first = values.data();
     const double* own = first + m * n1;
     plan.start = detail::make_operator(first + 1, m, n1);
@@ -222,6 +240,40 @@ inline graded_plan make_graded_plan(double alpha, const graded_table& table, std
         plan.series[k] = gamma / next;
         gamma = next;
     }
+    return plan;
+}
+
+// A plan for at least `elements` elements, shared with whoever asked for the same one lately. Safe to
+// call from any thread; two threads that miss at once both make it.
+inline std::shared_ptr<const graded_plan> plan_of(const target_kernels& kernels, double alpha,
+                                                  std::size_t nodes, double ratio,
+                                                  std::size_t elements) {
+    struct entry {
+        const target_kernels* kernels;
+        double alpha, ratio;
+        std::size_t nodes, elements;
+        std::shared_ptr<const graded_plan> plan;
+    };
+    static std::mutex guard;
+    static std::array<entry, 16> recent;  // latest first
+    elements = std::min((elements + 7) / 8 * 8, graded_most_elements);
+    auto matches = [&](const entry& e) {
+        return e.plan && e.alpha == alpha && e.nodes == nodes && e.ratio == ratio &&
+               e.elements >= elements && e.kernels == &kernels;
+    };
+    {
+        const std::lock_guard lock(guard);
+        const auto found = std::find_if(recent.begin(), recent.end(), matches);
+        if (found != recent.end()) {
+            std::rotate(recent.begin(), found, found + 1);
+            return recent.front().plan;
+        }
+    }
+    auto plan = std::make_shared<const graded_plan>(
+        make_graded_plan(kernels, alpha, table_of(nodes, ratio), elements));
+    const std::lock_guard lock(guard);
+    std::rotate(recent.begin(), recent.end() - 1, recent.end());
+    recent.front() = {&kernels, alpha, ratio, nodes, elements, plan};
     return plan;
 }
 

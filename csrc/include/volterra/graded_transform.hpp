@@ -116,7 +116,8 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
     for (std::size_t k = 1; k < count.size(); ++k) count[k] += count[k - 1];
     for (std::size_t i = 0; i < n; ++i) order[count[elements[i]]++] = i;  // stable
 
-    const auto plan = make_graded_plan(m.alpha(), table_of(level.nodes, level.ratio), most);
+    const auto shared_plan = plan_of(kernels, m.alpha(), level.nodes, level.ratio, most);
+    const graded_plan& plan = *shared_plan;
     const graded_meshes meshes(plan, horizon, most);
     const auto functional = make_functional(meshes, curve, m.mean_reversion, maturities, basis);
     const std::size_t per_lane = 6;  // status, negligible, doubt, guessed, remainder, spare

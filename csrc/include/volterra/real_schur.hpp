@@ -11,25 +11,43 @@ namespace volterra {
 
 namespace detail {
 
-// Applies I - 2 v v^T / v^T v, v of `size` entries, to rows (left) and columns (right) of the
-// n x n matrix s starting at `at`, and to the columns of q.
+// Applies I - 2 v v^T / v^T v, v of `size` entries, to rows and columns at, at + 1, ... of the n x n
+// matrix s and to the columns of q.
 inline void reflect(double* s, double* q, std::size_t n, std::size_t at, const double* v,
                     std::size_t size) {
-    double norm = 0.0;
+    double norm = 0.0, sum[16] = {};
     for (std::size_t i = 0; i < size; ++i) norm += v[i] * v[i];
     if (norm == 0.0) return;
     const double beta = 2.0 / norm;
+    for (std::size_t i = 0; i < size; ++i)
+        for (std::size_t j = 0; j < n; ++j) sum[j] += v[i] * s[(at + i) * n + j];
+    for (std::size_t i = 0; i < size; ++i)
+        for (std::size_t j = 0; j < n; ++j) s[(at + i) * n + j] -= beta * v[i] * sum[j];
+    for (double* matrix : {s, q})
+        for (std::size_t i = 0; i < n; ++i) {
+            double* row = matrix + i * n + at;
+            double dot = 0.0;
+            for (std::size_t j = 0; j < size; ++j) dot += row[j] * v[j];
+            for (std::size_t j = 0; j < size; ++j) row[j] -= beta * dot * v[j];
+        }
+}
+
+// The same for v of 3 entries and a known n.
+template <std::size_t n>
+inline void reflect3(double* s, double* q, std::size_t at, const double* v) {
+    const double norm = v[0] * v[0] + v[1] * v[1] + v[2] * v[2];
+    if (norm == 0.0) return;
+    const double beta = 2.0 / norm, w0 = beta * v[0], w1 = beta * v[1], w2 = beta * v[2];
+    double *a = s + at * n, *b = a + n, *c = b + n;
     for (std::size_t j = 0; j < n; ++j) {
-        double sum = 0.0;
-        for (std::size_t i = 0; i < size; ++i) sum += v[i] * s[(at + i) * n + j];
-        for (std::size_t i = 0; i < size; ++i) s[(at + i) * n + j] -= beta * sum * v[i];
+        const double dot = v[0] * a[j] + v[1] * b[j] + v[2] * c[j];
+        a[j] -= w0 * dot, b[j] -= w1 * dot, c[j] -= w2 * dot;
     }
     for (double* matrix : {s, q})
         for (std::size_t i = 0; i < n; ++i) {
             double* row = matrix + i * n + at;
-            double sum = 0.0;
-            for (std::size_t j = 0; j < size; ++j) sum += row[j] * v[j];
-            for (std::size_t j = 0; j < size; ++j) row[j] -= beta * sum * v[j];
+            const double dot = v[0] * row[0] + v[1] * row[1] + v[2] * row[2];
+            row[0] -= w0 * dot, row[1] -= w1 * dot, row[2] -= w2 * dot;
         }
 }
 
@@ -44,7 +62,8 @@ inline void householder(const double* x, std::size_t size, double* v) {
 
 // Overwrites the n x n matrix s by S and q by Q, n <= 16. Returns false if the iteration did not
 // converge. Entries below the diagonal blocks are exact zeros.
-inline bool real_schur(double* s, double* q, std::size_t n) {
+template <std::size_t n>
+inline bool real_schur(double* s, double* q) {
     double x[16], v[16];
     for (std::size_t i = 0; i < n * n; ++i) q[i] = i % (n + 1) == 0 ? 1.0 : 0.0;
     for (std::size_t k = 0; k + 2 < n; ++k) {
@@ -77,7 +96,10 @@ inline bool real_schur(double* s, double* q, std::size_t n) {
         for (std::size_t k = begin; k + 1 < end; ++k) {
             const std::size_t size = k + 2 < end ? 3 : 2;
             detail::householder(x, size, v);
-            detail::reflect(s, q, n, k, v, size);
+            if (size == 3)
+                detail::reflect3<n>(s, q, k, v);
+            else
+                detail::reflect(s, q, n, k, v, size);
             if (k > begin)
                 for (std::size_t i = k + 1; i < k + size; ++i) s[i * n + k - 1] = 0.0;
             for (std::size_t i = 0; i < 3 && k + 1 + i < end; ++i) x[i] = s[(k + 1 + i) * n + k];
