@@ -5,6 +5,7 @@
 
 #include "volterra/adams.hpp"
 #include "volterra/graded.hpp"
+#include "volterra/line_interpolation.hpp"
 #include "volterra/sum_series.hpp"
 
 namespace volterra {
@@ -17,6 +18,7 @@ struct target_kernels {
     void (*solve_graded_block)(const graded_block&);
     void (*sum_series)(const double* series, std::size_t stride, std::size_t terms,
                        const double* factor, std::size_t count, double* sum);
+    void (*interpolate_line)(const line_block&);
 };
 
 extern const target_kernels kernels_baseline;

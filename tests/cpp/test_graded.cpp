@@ -31,7 +31,7 @@ static std::vector<complex> solve(const target_kernels& kernels, const model_par
     const error_bounds bounds{1, std::vector<std::uint32_t>(u.size(), 0),
                               std::vector<double>(maturities.size(), tolerance)};
     if (errors) errors->assign(values.size(), 0.0);
-    solve_log_transform(kernels, m, curve, u, maturities, bounds, values,
+    solve_log_transform(kernels, m, curve, u, maturities, bounds, false, values,
                         errors ? std::span<double>(*errors) : std::span<double>());
     return values;
 }
@@ -209,9 +209,9 @@ static void test_basis() {
         graded_record record(3);
         const std::vector<double> never(3, -std::numeric_limits<double>::infinity());
         const auto level = graded_ladder(m.hurst, 5);
-        graded_pass(selected_kernels(), level, m, curve, u, all, maturities, true, never,
+        graded_pass(selected_kernels(), level, m, curve, u, all, maturities, true, false, never,
                     rows, record);
-        graded_pass(selected_kernels(), level, m, curve, u, all, maturities, false, never,
+        graded_pass(selected_kernels(), level, m, curve, u, all, maturities, false, false, never,
                     values, record);
         for (std::size_t t = 0; t < 3; ++t)
             for (std::size_t i = 0; i < 3; ++i) {

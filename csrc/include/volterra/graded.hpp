@@ -33,7 +33,8 @@ struct graded_block {
     const double* weights_f;          // (elements - 1) m x functionals
     const double* weights_psi;        // the same; read if first_psi is not null
     const std::size_t* first_active;  // [1 .. elements - 1]: functionals before it do not use it
-    double accuracy;                  // of phi, where the nonlinear systems stop
+    double accuracy;                  // of phi, where the nonlinear systems stop ...
+    bool of_logarithm;                // ... or of log phi
     const double* negligible;         // lanes: log |phi| below which psi is not solved for
     double least_variance;            // |phi| <= exp(least_variance int Re F)
     double typical_variance;          // size of what multiplies F in log phi, for `doubt`
@@ -180,7 +181,7 @@ inline void solve(const graded_block& b) {
                 predicted[p] = load_complex(at_nodes + p * pack_width);
                 const complex_pack middle = load_complex(at_nodes + (m / 2) * row + p * pack_width);
                 const pack bounded = smaller(larger(decay[p], broadcast(-200.0)), broadcast(200.0));
-                modulus[p] = power_of_two(1.4427 * bounded);
+                modulus[p] = b.of_logarithm ? broadcast(1.0) : power_of_two(1.4427 * bounded);
                 strict[p] = broadcast(wanted) * modulus[p] * modulus[p] *
                             (norm(f[p].derivative(middle)) + scale * scale);
             }

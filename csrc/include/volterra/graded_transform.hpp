@@ -17,6 +17,7 @@
 #include "targets.hpp"
 #include "volterra/aligned_buffer.hpp"
 #include "volterra/graded_functional.hpp"
+#include "volterra/graded_line.hpp"
 #include "volterra/mesh.hpp"
 
 namespace volterra {
@@ -95,12 +96,13 @@ struct graded_record {
 
 // One solve at one level of accuracy of the u numbered in `which`. values[r * u.size() + i]:
 // functional r (maturity, or maturity and elementary curve when `basis`) at u[i]. Where |phi| is
-// below negligible[i] it is not solved further. Maturities must ascend.
+// below negligible[i] it is not solved further. The nonlinear systems are solved to the level's accuracy
+// of phi, or of log phi. Maturities must ascend.
 inline void graded_pass(const target_kernels& kernels, const graded_level& level,
                         const model_parameters& m, const variance_curve& curve,
                         std::span<const std::complex<double>> u,
                         std::span<const std::size_t> which, std::span<const double> maturities,
-                        bool basis, std::span<const double> negligible,
+                        bool basis, bool of_logarithm, std::span<const double> negligible,
                         std::span<std::complex<double>> values, graded_record& record) {
     const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes, n = which.size();
     const double horizon = maturities.back();
@@ -128,7 +130,7 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
            *const guessed = doubt + lanes, *const remainder = guessed + lanes;
     auto block = detail::work_order(plan);
     block.c0 = c0, block.c1 = c1, block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
-    block.accuracy = level.accuracy;
+    block.accuracy = level.accuracy, block.of_logarithm = of_logarithm;
     block.least_variance = detail::least_variance(curve, m.mean_reversion);
     block.typical_variance = detail::integrated_curve(curve, m.alpha(), horizon) / horizon;
     block.negligible = cut, block.doubt = doubt, block.guessed = guessed;
@@ -196,6 +198,41 @@ struct error_bounds {
     double operator()(std::size_t t, std::size_t i) const { return bound[t * lines + line[i]]; }
 };
 
+// Interpolation along a line needs log phi at the far nodes to an absolute accuracy: so many levels finer.
+inline constexpr std::size_t line_levels = 0;
+
+// The u of a call that are interpolated along one line.
+struct line_task {
+    line_grid grid;
+    double variance, tolerance;
+    std::size_t level;
+    std::vector<std::size_t> members;
+};
+
+inline std::vector<line_task> lines_of(const model_parameters& m, const variance_curve& curve,
+                                       std::span<const std::complex<double>> u,
+                                       std::span<const double> maturities,
+                                       const error_bounds& bounds, std::span<const double> bound) {
+    std::vector<line_task> lines;
+    std::vector<std::size_t> line_at(bounds.lines, 0);  // 0: not seen, k + 1: lines[k]
+    const double longest = maturities.back();
+    for (std::size_t i = 0; i < u.size(); ++i) {
+        if (!is_interpolated_line(u[i].imag())) continue;
+        auto& at = line_at[bounds.line[i]];
+        if (at == 0) {
+            const double variance = detail::integrated_curve(curve, m.alpha(), longest) / longest;
+            lines.push_back({make_line_grid(m, u[i].imag(), longest, variance, bound[i]), variance,
+                             bound[i],
+                             std::min(graded_level_for(bound[i]) + line_levels, graded_levels - 2),
+                             {}});
+            at = lines.size();
+        }
+        if (std::abs(u[i].real()) <= lines[at - 1].grid.reach) lines[at - 1].members.push_back(i);
+    }
+    std::erase_if(lines, [](const line_task& line) { return line.members.empty(); });
+    return lines;
+}
+
 // log E[exp(iuX_T)] by the graded scheme, maturities x u. Maturities must ascend. Returns the largest estimated error as a multiple of its
 // bound. Where no level converged, which is what happens past an explosion time, the value is nan.
 //
@@ -208,7 +245,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                                   std::span<const std::complex<double>> u,
                                   std::span<const double> maturities,
                                   const error_bounds& bounds,
-                                  std::span<std::complex<double>> values,
+                                  bool interpolate, std::span<std::complex<double>> values,
                                   std::span<double> errors) {
     const std::size_t n = u.size();
     constexpr double infinity = std::numeric_limits<double>::infinity();
@@ -232,12 +269,38 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                 if (open[i] && level[i] == l) which.push_back(i);
             if (!which.empty())
                 graded_pass(kernels, graded_ladder(m.hurst, l), m, curve, u, which, maturities,
-                            false, cut, into, record);
+                            false, false, cut, into, record);
         }
     };
+    // The members of a line, interpolated; returns false if that is not good enough.
+    std::vector<line_task> lines;
+    auto pass_line = [&](line_task& line, std::span<std::complex<double>> into) {
+        const std::size_t nodes = line.grid.s.size();
+        graded_record record(nodes);
+        std::vector<std::complex<double>> at_nodes(maturities.size() * nodes);
+        which.resize(nodes);
+        for (std::size_t j = 0; j < nodes; ++j) which[j] = j;
+        const std::vector<double> never(nodes, -infinity);
+        graded_pass(kernels, graded_ladder(m.hurst, line.level), m, curve, line.grid.u, which,
+                    maturities, false, true, never, at_nodes, record);
+        for (const char solved : record.solved)
+            if (!solved) return false;
+        const auto tails = line_tails(nodes, at_nodes);
+        for (std::size_t t = 0; t < tails.size(); ++t)
+            if (!(tails[t] < 0.3 * bounds(t, line.members.front()))) return false;
+        interpolate_line(kernels, line.grid, at_nodes, u, line.members, into);
+        return true;
+    };
     graded_record coarse(n);
+    if (interpolate)
+        for (auto& line : lines_of(m, curve, u, maturities, bounds, bound)) {
+            if (!pass_line(line, values)) continue;
+            for (const std::size_t i : line.members)
+                coarse.solved[i] = true, open[i] = false, level[i] = line.level;
+            lines.push_back(std::move(line));
+        }
     double worst = 0.0;
-    for (bool again = true; again;) {
+    for (bool again = std::find(open.begin(), open.end(), 1) != open.end(); again;) {
         pass(values, coarse);
         again = false;
         for (std::size_t i = 0; i < n; ++i) {
@@ -271,9 +334,20 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
         level[i] = graded_next_level(m.hurst, level[i]);
         for (std::size_t t = 0; t < maturities.size(); ++t) errors[t * n + i] = infinity;
     }
-    for (bool again = true; again;) {
+    for (auto& line : lines) {
+        line.level = graded_next_level(m.hurst, line.level);
+        line.grid = make_line_grid(m, line.grid.imaginary, maturities.back(), line.variance,
+                                   0.05 * line.tolerance);
+        const bool good = pass_line(line, finer);
+        for (const std::size_t i : line.members) fine.solved[i] = good, open[i] = false;
+    }
+    bool first_round = true;
+    for (bool again = true; again; first_round = false) {
         pass(finer, fine);
         again = false;
+        if (first_round)
+            for (const auto& line : lines)
+                for (const std::size_t i : line.members) open[i] = true;
         for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
             open[i] = level[i] + 1 < graded_levels;

@@ -20,7 +20,7 @@ inline double effective_variance(const target_kernels& kernels, const model_para
                                  const variance_curve& curve, double maturity) {
     const std::complex<double> centre(0.0, -0.5);
     const auto result = log_transform(kernels, m, curve, {&centre, 1}, {&maturity, 1},
-                                      {scheme::automatic, 0, 1e-3});
+                                      {.tolerance = 1e-3, .interpolate = false});
     return -8.0 * result.values[0].real();
 }
 
@@ -31,7 +31,7 @@ inline priced_line line_of(const target_kernels& kernels, const model_parameters
     auto evaluate = [&](std::span<const std::complex<double>> u,
                         std::span<std::complex<double>> values, std::span<double> errors) {
         const auto result = log_transform(kernels, m, curve, u, {&maturity, 1},
-                                          {scheme::automatic, 0, 0.3 * tolerance});
+                                          {.tolerance = 0.3 * tolerance, .interpolate = false});
         std::copy(result.values.begin(), result.values.end(), values.begin());
         std::copy(result.errors.begin(), result.errors.end(), errors.begin());
     };

@@ -30,6 +30,7 @@ struct transform_options {
     double tolerance = 1e-8;   // bound on |error of phi(u)| / phi(i Im u)
     std::size_t threads = 1;
     bool estimate = true;      // whether the errors are wanted
+    bool interpolate = true;   // automatic: along the lines Im u = 0 and -1/2 (graded_line.hpp)
 };
 
 struct transform_result {
@@ -130,7 +131,8 @@ private:
         }
         const error_bounds rough{1, std::vector<std::uint32_t>(u.size(), 0),
                                  std::vector<double>(maturities_.size(), 1e-3)};
-        solve_log_transform(kernels_, m_, curve_, u, maturities_, rough, values, {});
+        solve_log_transform(kernels_, m_, curve_, u, maturities_, rough, false, values,
+                            {});
         return values;
     }
 
@@ -169,7 +171,9 @@ private:
     }
 
     void solve_on_graded_mesh() {
-        worst_ = solve_log_transform(kernels_, m_, curve_, u_, maturities_, bounds_, values_, errors_);
+        worst_ = solve_log_transform(kernels_, m_, curve_, u_, maturities_, bounds_,
+                                     options_.method == scheme::automatic && options_.interpolate,
+                                     values_, errors_);
         // A u that no mesh could solve goes to the uniform scheme, with that scheme's error.
         for (std::size_t k = 0; k < values_.size(); ++k) {
             if (!std::isnan(values_[k].real())) continue;

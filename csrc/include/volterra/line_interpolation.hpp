@@ -1,0 +1,78 @@
+// Interpolation of log phi along a horizontal line of u, once per instruction set.
+//
+// L(x) = log phi(x + iy) has an even real and an odd imaginary part, so L at the positive halves of
+// 2N Chebyshev nodes of the first kind in s = asinh(x) gives it at all 2N. In barycentric form, with
+// d_j = w_j / (s^2 - s_j^2) and w_j = (-1)^j sin(theta_j),
+//
+//     Re L(s) = sum d_j s_j Re L_j / sum d_j s_j,   Im L(s) = s sum d_j Im L_j / sum d_j s_j.
+//
+// Source of the barycentric form: Barycentric Lagrange Interpolation, SIAM Review 46, 2004,
+// doi 10.1137/S0036144502417715 (from memory, reproduced).
+#pragma once
+
+#include "volterra/simd.hpp"
+
+namespace volterra {
+
+// One line's work order.
+struct line_block {
+    std::size_t nodes;       // N
+    const double* square;    // N: s_j^2
+    const double* weight;    // N: w_j
+    const double* height;    // N: s_j
+    std::size_t rows;        // functions interpolated
+    const double* even;      // rows x N: s_j Re L_j
+    const double* odd;       // rows x N: Im L_j
+    std::size_t count;       // points, padded to a multiple of line_points
+    const double* s;         // count
+    double* values;          // rows x 2 x count: real parts, then imaginary parts
+    double* workspace;       // N x line_points
+};
+
+inline constexpr std::size_t line_points = 32;  // points in flight
+
+}  // namespace volterra
+
+namespace volterra::VOLTERRA_TARGET {
+
+inline void interpolate_line(const line_block& b) {
+    constexpr std::size_t wide = vector_registers == 32 ? 4 : 2;  // packs of points at a time
+    constexpr std::size_t step = wide * pack_width;
+    static_assert(line_points % step == 0);
+    double* const d = b.workspace;
+    for (std::size_t at = 0; at < b.count; at += step) {
+        pack s[wide], square[wide], sum[wide] = {};
+        for (std::size_t c = 0; c < wide; ++c) {
+            s[c] = load(b.s + at + c * pack_width);
+            square[c] = s[c] * s[c];
+        }
+        for (std::size_t j = 0; j < b.nodes; ++j)
+            for (std::size_t c = 0; c < wide; ++c) {
+                pack apart = square[c] - broadcast(b.square[j]);
+                apart = apart == 0.0 ? broadcast(1e-290) : apart;  // at a node: its value alone
+                const pack value = broadcast(b.weight[j]) / apart;
+                sum[c] += broadcast(b.height[j]) * value;
+                store(d + j * step + c * pack_width, value);
+            }
+        for (std::size_t c = 0; c < wide; ++c) sum[c] = 1.0 / sum[c];
+        for (std::size_t r = 0; r < b.rows; ++r) {
+            const double *const even = b.even + r * b.nodes, *const odd = b.odd + r * b.nodes;
+            pack re[wide] = {}, im[wide] = {};
+            for (std::size_t j = 0; j < b.nodes; ++j) {
+                const pack e = broadcast(even[j]), o = broadcast(odd[j]);
+                for (std::size_t c = 0; c < wide; ++c) {
+                    const pack value = load(d + j * step + c * pack_width);
+                    re[c] += e * value;
+                    im[c] += o * value;
+                }
+            }
+            double* const to = b.values + r * 2 * b.count + at;
+            for (std::size_t c = 0; c < wide; ++c) {
+                store(to + c * pack_width, re[c] * sum[c]);
+                store(to + b.count + c * pack_width, s[c] * (im[c] * sum[c]));
+            }
+        }
+    }
+}
+
+}  // namespace volterra::VOLTERRA_TARGET
