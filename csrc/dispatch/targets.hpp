@@ -4,6 +4,7 @@
 #include <cstddef>
 
 #include "volterra/adams.hpp"
+#include "volterra/error_estimate.hpp"
 #include "volterra/graded.hpp"
 #include "volterra/line_interpolation.hpp"
 #include "volterra/sum_series.hpp"
@@ -19,6 +20,7 @@ struct target_kernels {
     void (*sum_series)(const double* series, std::size_t stride, std::size_t terms,
                        const double* factor, std::size_t count, double* sum);
     void (*interpolate_line)(const line_block&);
+    void (*estimate_error)(const estimate_row&);
 };
 
 extern const target_kernels kernels_baseline;

@@ -23,10 +23,15 @@ namespace volterra {
 
 inline bool is_interpolated_line(double imaginary) { return imaginary == 0.0 || imaginary == -0.5; }
 
+// log phi is divided by this before it is interpolated, so that the errors of the far nodes, where
+// |log phi| is large, do not reach the near points.
+inline double line_scale(double x) { return std::sqrt(1.0 + x * x / 64.0); }
+
 struct line_grid {
     double imaginary;
     double reach;            // serves |Re u| <= reach
     std::vector<double> s;   // positive Chebyshev nodes in asinh(Re u), descending
+    std::vector<double> scale;  // what log phi is divided by
     std::vector<std::complex<double>> u;
 
     bool empty() const { return s.empty(); }
@@ -37,7 +42,7 @@ struct line_grid {
 inline line_grid make_line_grid(const model_parameters& m, double imaginary, double maturity,
                                 double variance, double tolerance) {
     constexpr double moderate = 100.0;  // |log phi| at the end of the line
-    line_grid grid{imaginary, 0.0, {}, {}};
+    line_grid grid{imaginary, 0.0, {}, {}, {}};
     const double alpha = m.alpha(), z = std::pow(maturity, alpha);
     const double settling = variance * maturity / (z * std::tgamma(2.0 - alpha));
     for (double reach = 2048.0; reach >= 16.0; reach *= 0.5) {
@@ -54,26 +59,29 @@ inline line_grid make_line_grid(const model_parameters& m, double imaginary, dou
     // singularity lies at a distance of 1/2 or more from the line -1/2; the caller checks.
     const double end = std::asinh(grid.reach), ellipse = 0.5 * std::acos(-1.0) / end;
     const double rate = 2.0 * std::log(ellipse + std::sqrt(1.0 + ellipse * ellipse));
-    const double wanted = -0.8 * std::log(tolerance) / rate;
+    const double wanted = -std::log(tolerance) / rate;
     const auto nodes = 8 * static_cast<std::size_t>(std::ceil(std::clamp(wanted, 16.0, 128.0) / 8.0));
     for (std::size_t j = 0; j < nodes; ++j) {
         const double theta = std::acos(-1.0) * (2.0 * static_cast<double>(j) + 1.0) /
                              (4.0 * static_cast<double>(nodes));
         grid.s.push_back(end * std::cos(theta));
+        grid.scale.push_back(line_scale(std::sinh(grid.s.back())));
         grid.u.emplace_back(std::sinh(grid.s.back()), imaginary);
     }
     return grid;
 }
 
-// The largest of the last Chebyshev coefficients of each row of `at_nodes` (rows x N): what the
-// interpolation neglects.
-inline std::vector<double> line_tails(std::size_t nodes,
+// What the interpolation of each row of `at_nodes` (rows x N) neglects: the largest of its last
+// Chebyshev coefficients. The error of log phi is of that size times line_scale.
+inline std::vector<double> line_tails(const line_grid& grid,
                                       std::span<const std::complex<double>> at_nodes) {
     constexpr std::size_t last = 4;
+    const std::size_t nodes = grid.s.size();
     std::vector<double> cosines(last * nodes);
     for (std::size_t k = 0; k < last; ++k)
         for (std::size_t j = 0; j < nodes; ++j)
             cosines[k * nodes + j] =
+                2.0 / (grid.scale[j] * static_cast<double>(nodes)) *
                 std::cos(std::acos(-1.0) * static_cast<double>((2 * nodes - 1 - k) * (2 * j + 1)) /
                          static_cast<double>(4 * nodes));
     std::vector<double> tails;
@@ -85,7 +93,7 @@ inline std::vector<double> line_tails(std::size_t nodes,
                 const auto value = at_nodes[r * nodes + j];
                 sum += cosines[k * nodes + j] * (k % 2 ? value.real() : value.imag());
             }
-            most = std::max(most, std::abs(sum) * 2.0 / static_cast<double>(nodes));
+            most = std::max(most, std::abs(sum));
         }
         tails.push_back(most);
     }
@@ -100,7 +108,7 @@ inline void interpolate_line(const target_kernels& kernels, const line_grid& gri
                              std::span<std::complex<double>> values) {
     const std::size_t n = grid.s.size(), rows = at_nodes.size() / n, stride = u.size();
     const std::size_t count = (which.size() + line_points - 1) / line_points * line_points;
-    aligned_buffer tables(3 * n + 2 * rows * n), s(count), out(rows * 2 * count);
+    aligned_buffer tables(3 * n + 2 * rows * n), points(2 * count), out(rows * 2 * count);
     aligned_buffer workspace(n * line_points);
     double *const square = tables.data(), *const weight = square + n, *const height = weight + n;
     double *const even = height + n, *const odd = even + rows * n;
@@ -110,19 +118,26 @@ inline void interpolate_line(const target_kernels& kernels, const line_grid& gri
                              (4.0 * static_cast<double>(n));
         weight[j] = (j % 2 ? -1.0 : 1.0) * std::sin(theta);
         for (std::size_t r = 0; r < rows; ++r) {
-            even[r * n + j] = grid.s[j] * at_nodes[r * n + j].real();
-            odd[r * n + j] = at_nodes[r * n + j].imag();
+            even[r * n + j] = grid.s[j] / grid.scale[j] * at_nodes[r * n + j].real();
+            odd[r * n + j] = at_nodes[r * n + j].imag() / grid.scale[j];
         }
     }
-    for (std::size_t i = 0; i < count; ++i)
-        s[i] = i < which.size() ? std::asinh(u[which[i]].real()) : s[0];
-    kernels.interpolate_line({n, square, weight, height, rows, even, odd, count, s.data(), out.data(),
-                              workspace.data()});
+    double *const s = points.data(), *const scale = s + count;
+    for (std::size_t i = 0; i < count; ++i) {
+        const double x = u[which[std::min(i, which.size() - 1)]].real();
+        s[i] = std::asinh(x), scale[i] = line_scale(x);
+    }
+    kernels.interpolate_line({n, square, weight, height, rows, even, odd, count, s, scale,
+                              out.data(), workspace.data()});
+    const bool contiguous = which.back() - which.front() + 1 == which.size();  // `which` ascends
     for (std::size_t r = 0; r < rows; ++r) {
         const double* const re = out.data() + r * 2 * count;
         const double* const im = re + count;
-        for (std::size_t i = 0; i < which.size(); ++i)
-            values[r * stride + which[i]] = {re[i], im[i]};
+        std::complex<double>* const to = values.data() + r * stride;
+        if (contiguous)
+            for (std::size_t i = 0; i < which.size(); ++i) to[which[0] + i] = {re[i], im[i]};
+        else
+            for (std::size_t i = 0; i < which.size(); ++i) to[which[i]] = {re[i], im[i]};
     }
 }
 

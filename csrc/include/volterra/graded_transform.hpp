@@ -96,13 +96,13 @@ struct graded_record {
 
 // One solve at one level of accuracy of the u numbered in `which`. values[r * u.size() + i]:
 // functional r (maturity, or maturity and elementary curve when `basis`) at u[i]. Where |phi| is
-// below negligible[i] it is not solved further. The nonlinear systems are solved to the level's accuracy
-// of phi, or of log phi. Maturities must ascend.
+// below negligible[i] it is not solved further. For the nodes of a line (graded_line.hpp) it is log phi
+// that has to be accurate, and one mesh serves them all. Maturities must ascend.
 inline void graded_pass(const target_kernels& kernels, const graded_level& level,
                         const model_parameters& m, const variance_curve& curve,
                         std::span<const std::complex<double>> u,
                         std::span<const std::size_t> which, std::span<const double> maturities,
-                        bool basis, bool of_logarithm, std::span<const double> negligible,
+                        bool basis, bool on_line, std::span<const double> negligible,
                         std::span<std::complex<double>> values, graded_record& record) {
     const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes, n = which.size();
     const double horizon = maturities.back();
@@ -111,8 +111,9 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
     for (std::size_t i = 0; i < n; ++i) {
         c[i] = riccati(m, u[which[i]]);
         elements[i] = graded_elements(level, m.alpha(), c[i], horizon);
-        ++count[elements[i] + 1];
     }
+    if (on_line) std::fill(elements.begin(), elements.end(), *std::ranges::max_element(elements));
+    for (const std::size_t k : elements) ++count[k + 1];
     std::size_t most = graded_most_elements;
     while (most > 1 && count[most + 1] == 0) --most;
     for (std::size_t k = 1; k < count.size(); ++k) count[k] += count[k - 1];
@@ -130,7 +131,7 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
            *const guessed = doubt + lanes, *const remainder = guessed + lanes;
     auto block = detail::work_order(plan);
     block.c0 = c0, block.c1 = c1, block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
-    block.accuracy = level.accuracy, block.of_logarithm = of_logarithm;
+    block.accuracy = level.accuracy, block.of_logarithm = on_line;
     block.least_variance = detail::least_variance(curve, m.mean_reversion);
     block.typical_variance = detail::integrated_curve(curve, m.alpha(), horizon) / horizon;
     block.negligible = cut, block.doubt = doubt, block.guessed = guessed;
@@ -207,6 +208,7 @@ struct line_task {
     double variance, tolerance;
     std::size_t level;
     std::vector<std::size_t> members;
+    std::vector<double> tails;  // per maturity
 };
 
 inline std::vector<line_task> lines_of(const model_parameters& m, const variance_curve& curve,
@@ -224,7 +226,7 @@ inline std::vector<line_task> lines_of(const model_parameters& m, const variance
             lines.push_back({make_line_grid(m, u[i].imag(), longest, variance, bound[i]), variance,
                              bound[i],
                              std::min(graded_level_for(bound[i]) + line_levels, graded_levels - 2),
-                             {}});
+                             {}, {}});
             at = lines.size();
         }
         if (std::abs(u[i].real()) <= lines[at - 1].grid.reach) lines[at - 1].members.push_back(i);
@@ -285,9 +287,12 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                     maturities, false, true, never, at_nodes, record);
         for (const char solved : record.solved)
             if (!solved) return false;
-        const auto tails = line_tails(nodes, at_nodes);
-        for (std::size_t t = 0; t < tails.size(); ++t)
-            if (!(tails[t] < 0.3 * bounds(t, line.members.front()))) return false;
+        line.tails = line_tails(line.grid, at_nodes);
+        for (std::size_t t = 0; t < maturities.size(); ++t)
+            for (std::size_t j = 0; j < nodes; ++j)
+                if (!(line.tails[t] * line.grid.scale[j] * std::exp(at_nodes[t * nodes + j].real()) <
+                      0.3 * bounds(t, line.members.front())))
+                    return false;
         interpolate_line(kernels, line.grid, at_nodes, u, line.members, into);
         return true;
     };
@@ -321,14 +326,16 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
 
     std::vector<double> integrals;
     for (double t : maturities) integrals.push_back(detail::integrated_curve(curve, m.alpha(), t));
-    // |exp(z) - 1|, to a tenth of a percent
-    auto change = [](std::complex<double> z) {
-        const double size = std::sqrt(std::norm(z));
-        return size < 1e-3 ? size : std::abs(std::exp(z) - 1.0);
-    };
     std::vector<std::complex<double>> finer(values.size());
     graded_record fine(n);
-    std::vector<double> estimate(maturities.size());
+    std::vector<double> estimate(values.size()), least(n), c0(n), relative(n), spread(n, 0.0);
+    std::vector<double> tails(maturities.size(), 0.0);
+    for (const auto& line : lines) {
+        for (const std::size_t i : line.members)
+            spread[i] = line_scale(u[i].real());
+        for (std::size_t t = 0; t < tails.size(); ++t) tails[t] = std::max(tails[t], line.tails[t]);
+    }
+    for (std::size_t i = 0; i < n; ++i) c0[i] = std::abs(riccati(m, u[i]).c0);
     for (std::size_t i = 0; i < n; ++i) {
         open[i] = coarse.solved[i];
         level[i] = graded_next_level(m.hurst, level[i]);
@@ -349,30 +356,27 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
             for (const auto& line : lines)
                 for (const std::size_t i : line.members) open[i] = true;
         for (std::size_t i = 0; i < n; ++i) {
+            least[i] = 0.06 * graded_level_error(level[i]);
+            relative[i] = 0.0;
+        }
+        for (std::size_t t = 0; t < maturities.size(); ++t)
+            kernels.estimate_error({n, reinterpret_cast<const double*>(values.data() + t * n),
+                                    reinterpret_cast<const double*>(finer.data() + t * n),
+                                    c0.data(), least.data(), relative.data(), spread.data(), tails[t],
+                                    integrals[t],
+                                    estimate.data() + t * n,
+                                    t ? estimate.data() + (t - 1) * n : nullptr});
+        for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
             open[i] = level[i] + 1 < graded_levels;
             if (fine.solved[i]) {
-                // A difference can vanish by chance at one maturity, hardly at all of them: up to
-                // each one the relative error so far counts too, and what the next one shows.
-                const double least = 0.06 * graded_level_error(level[i]);
-                const double c0 = std::abs(riccati(m, u[i]).c0);
-                double relative = 0.0;
-                for (std::size_t t = 0; t < maturities.size(); ++t) {
-                    const std::size_t at = t * n + i;
-                    const double modulus = std::exp(values[at].real());
-                    const double size = std::max(1.0, std::sqrt(std::norm(values[at])));
-                    const double difference = change(finer[at] - values[at]);
-                    const double floor = 8.0 * std::numeric_limits<double>::epsilon() *
-                                         (c0 * integrals[t] + size);
-                    relative = std::max(relative, difference / size);
-                    estimate[t] = modulus * (4.0 * difference + (1.2 * relative + least) * size + floor);
-                    if (t) estimate[t - 1] += 0.3 * modulus * difference;
-                    if (maturities[t] > coarse.guessed_from[i])
-                        estimate[t] = std::max(estimate[t], 2.0 * coarse.guessed_size[i]);
-                }
                 double misses = 0.0;  // largest estimate as a multiple of its bound
-                for (std::size_t t = 0; t < maturities.size(); ++t)
-                    misses = std::max(misses, estimate[t] / bounds(t, i));
+                for (std::size_t t = 0; t < maturities.size(); ++t) {
+                    if (maturities[t] > coarse.guessed_from[i])
+                        estimate[t * n + i] =
+                            std::max(estimate[t * n + i], 2.0 * coarse.guessed_size[i]);
+                    misses = std::max(misses, estimate[t * n + i] / bounds(t, i));
+                }
                 // Keep what has the smallest estimate; the finer values are better than the estimate
                 // of the coarse ones by this factor at least.
                 constexpr double gain = 0.3;
@@ -381,12 +385,12 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                 for (std::size_t t = 0; t < maturities.size(); ++t) {
                     const std::size_t at = t * n + i;
                     before = std::max(before, errors[at] / bounds(t, i));
-                    now = std::max(now, (keep ? 1.0 : gain) * estimate[t] / bounds(t, i));
+                    now = std::max(now, (keep ? 1.0 : gain) * estimate[at] / bounds(t, i));
                 }
                 if (now < before)
                     for (std::size_t t = 0; t < maturities.size(); ++t) {
                         const std::size_t at = t * n + i;
-                        errors[at] = (keep ? 1.0 : gain) * estimate[t];
+                        errors[at] = (keep ? 1.0 : gain) * estimate[at];
                         if (!keep) values[at] = finer[at];
                     }
                 open[i] = open[i] && !(std::min(now, before) <= 1.0);

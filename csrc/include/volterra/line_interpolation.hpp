@@ -1,8 +1,8 @@
 // Interpolation of log phi along a horizontal line of u, once per instruction set.
 //
-// L(x) = log phi(x + iy) has an even real and an odd imaginary part, so L at the positive halves of
-// 2N Chebyshev nodes of the first kind in s = asinh(x) gives it at all 2N. In barycentric form, with
-// d_j = w_j / (s^2 - s_j^2) and w_j = (-1)^j sin(theta_j),
+// L(x) = log phi(x + iy) / scale(x) has an even real and an odd imaginary part, so L at the positive
+// ones of 2N Chebyshev nodes of the first kind in s = asinh(x) gives it at all 2N. In barycentric
+// form, with d_j = w_j / (s^2 - s_j^2) and w_j = (-1)^j sin(theta_j),
 //
 //     Re L(s) = sum d_j s_j Re L_j / sum d_j s_j,   Im L(s) = s sum d_j Im L_j / sum d_j s_j.
 //
@@ -25,6 +25,7 @@ struct line_block {
     const double* odd;       // rows x N: Im L_j
     std::size_t count;       // points, padded to a multiple of line_points
     const double* s;         // count
+    const double* scale;     // count: what the interpolant is multiplied by
     double* values;          // rows x 2 x count: real parts, then imaginary parts
     double* workspace;       // N x line_points
 };
@@ -54,7 +55,7 @@ inline void interpolate_line(const line_block& b) {
                 sum[c] += broadcast(b.height[j]) * value;
                 store(d + j * step + c * pack_width, value);
             }
-        for (std::size_t c = 0; c < wide; ++c) sum[c] = 1.0 / sum[c];
+        for (std::size_t c = 0; c < wide; ++c) sum[c] = load(b.scale + at + c * pack_width) / sum[c];
         for (std::size_t r = 0; r < b.rows; ++r) {
             const double *const even = b.even + r * b.nodes, *const odd = b.odd + r * b.nodes;
             pack re[wide] = {}, im[wide] = {};
