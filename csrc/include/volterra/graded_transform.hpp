@@ -199,14 +199,11 @@ struct error_bounds {
     double operator()(std::size_t t, std::size_t i) const { return bound[t * lines + line[i]]; }
 };
 
-// Interpolation along a line needs log phi at the far nodes to an absolute accuracy: so many levels finer.
-inline constexpr std::size_t line_levels = 0;
-
 // The u of a call that are interpolated along one line.
 struct line_task {
     line_grid grid;
     double variance, tolerance;
-    std::size_t level;
+    std::size_t level;  // a rung of mesh.hpp
     std::vector<std::size_t> members;
     std::vector<double> tails;  // per maturity
 };
@@ -219,13 +216,14 @@ inline std::vector<line_task> lines_of(const model_parameters& m, const variance
     std::vector<std::size_t> line_at(bounds.lines, 0);  // 0: not seen, k + 1: lines[k]
     const double longest = maturities.back();
     for (std::size_t i = 0; i < u.size(); ++i) {
-        if (!is_interpolated_line(u[i].imag())) continue;
+        // At u = 0 the transform is 1 exactly, and the solver knows.
+        if (!is_interpolated_line(u[i].imag()) || u[i] == 0.0) continue;
         auto& at = line_at[bounds.line[i]];
         if (at == 0) {
             const double variance = detail::integrated_curve(curve, m.alpha(), longest) / longest;
             lines.push_back({make_line_grid(m, u[i].imag(), longest, variance, bound[i]), variance,
                              bound[i],
-                             std::min(graded_level_for(bound[i]) + line_levels, graded_levels - 2),
+                             2 * graded_level_for(bound[i]),
                              {}, {}});
             at = lines.size();
         }
@@ -251,7 +249,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                                   std::span<double> errors) {
     const std::size_t n = u.size();
     constexpr double infinity = std::numeric_limits<double>::infinity();
-    std::vector<std::size_t> level(n), which;
+    std::vector<std::size_t> level(n), which;  // level: a rung of mesh.hpp
     std::vector<double> bound(n, infinity), cut(n);
     std::vector<char> open(n, 1);
     for (std::size_t i = 0; i < n; ++i) {
@@ -261,16 +259,16 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
         }
         for (std::size_t t = 0; t < maturities.size(); ++t)
             bound[i] = std::min(bound[i], bounds(t, i));
-        level[i] = graded_level_for(bound[i]);
+        level[i] = 2 * graded_level_for(bound[i]);
         cut[i] = std::log(graded_negligible * bound[i]);
     }
     auto pass = [&](std::span<std::complex<double>> into, graded_record& record) {
-        for (std::size_t l = 0; l < graded_levels; ++l) {
+        for (std::size_t l = 0; l < graded_rungs; ++l) {
             which.clear();
             for (std::size_t i = 0; i < n; ++i)
                 if (open[i] && level[i] == l) which.push_back(i);
             if (!which.empty())
-                graded_pass(kernels, graded_ladder(m.hurst, l), m, curve, u, which, maturities,
+                graded_pass(kernels, graded_rung(m.hurst, l), m, curve, u, which, maturities,
                             false, false, cut, into, record);
         }
     };
@@ -283,7 +281,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
         which.resize(nodes);
         for (std::size_t j = 0; j < nodes; ++j) which[j] = j;
         const std::vector<double> never(nodes, -infinity);
-        graded_pass(kernels, graded_ladder(m.hurst, line.level), m, curve, line.grid.u, which,
+        graded_pass(kernels, graded_rung(m.hurst, line.level), m, curve, line.grid.u, which,
                     maturities, false, true, never, at_nodes, record);
         for (const char solved : record.solved)
             if (!solved) return false;
@@ -311,9 +309,9 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
         for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
             const bool doubtful = errors.empty() && graded_doubt * coarse.doubt[i] > bound[i];
-            open[i] = (!coarse.solved[i] || doubtful) && level[i] + 1 < graded_levels;
+            open[i] = (!coarse.solved[i] || doubtful) && level[i] + 2 < graded_rungs;
             if (open[i])
-                level[i] = std::min(level[i] + (coarse.solved[i] ? 1 : 2), graded_levels - 1);
+                level[i] = std::min(level[i] + (coarse.solved[i] ? 2 : 4), graded_rungs - 2);
             else if (doubtful)
                 worst = std::max(worst, graded_doubt * coarse.doubt[i] / bound[i]);
             again |= open[i];
@@ -338,11 +336,11 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
     for (std::size_t i = 0; i < n; ++i) c0[i] = std::abs(riccati(m, u[i]).c0);
     for (std::size_t i = 0; i < n; ++i) {
         open[i] = coarse.solved[i];
-        level[i] = graded_next_level(m.hurst, level[i]);
+        level[i] += 1;
         for (std::size_t t = 0; t < maturities.size(); ++t) errors[t * n + i] = infinity;
     }
     for (auto& line : lines) {
-        line.level = graded_next_level(m.hurst, line.level);
+        line.level += 1;
         line.grid = make_line_grid(m, line.grid.imaginary, maturities.back(), line.variance,
                                    0.05 * line.tolerance);
         const bool good = pass_line(line, finer);
@@ -356,7 +354,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
             for (const auto& line : lines)
                 for (const std::size_t i : line.members) open[i] = true;
         for (std::size_t i = 0; i < n; ++i) {
-            least[i] = 0.06 * graded_level_error(level[i]);
+            least[i] = 0.06 * graded_rung_error(level[i]);
             relative[i] = 0.0;
         }
         for (std::size_t t = 0; t < maturities.size(); ++t)
@@ -368,7 +366,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                                     t ? estimate.data() + (t - 1) * n : nullptr});
         for (std::size_t i = 0; i < n; ++i) {
             if (!open[i]) continue;
-            open[i] = level[i] + 1 < graded_levels;
+            open[i] = level[i] + 1 < graded_rungs;
             if (fine.solved[i]) {
                 double misses = 0.0;  // largest estimate as a multiple of its bound
                 for (std::size_t t = 0; t < maturities.size(); ++t) {
@@ -398,7 +396,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                 if (!keep) coarse.guessed_size[i] = fine.guessed_size[i];
             }
             if (!open[i]) continue;
-            level[i] = std::min(level[i] + 2, graded_levels - 1);
+            level[i] = std::min(level[i] + 3, graded_rungs - 1);
             again = true;
         }
     }

@@ -12,6 +12,7 @@
 #include <cmath>
 #include <complex>
 #include <cstddef>
+#include <iterator>
 
 #include "volterra/graded_table.hpp"
 #include "volterra/model.hpp"
@@ -68,14 +69,22 @@ inline graded_level graded_ladder(double hurst, std::size_t level) {
     return {r.nodes, r.ratio, r.first, accuracy};
 }
 
-// The next finer level whose mesh is another one.
-inline std::size_t graded_next_level(double hurst, std::size_t level) {
-    const auto from = graded_ladder(hurst, level);
-    for (std::size_t next = level + 1; next < graded_levels; ++next) {
-        const auto to = graded_ladder(hurst, next);
-        if (to.nodes != from.nodes || to.ratio != from.ratio) return next;
-    }
-    return graded_levels - 1;
+// Rung 2l is level l; rung 2l + 1 has narrower elements and a shorter first one, for a second solution
+// that tells the error of the first: about 5 (m = 4) to 20 (m = 10) times more accurate.
+inline constexpr std::size_t graded_rungs = 2 * graded_levels;
+
+inline graded_level graded_rung(double hurst, std::size_t rung) {
+    graded_level level = graded_ladder(hurst, rung / 2);
+    if (rung % 2 == 0) return level;
+    static constexpr double ratios[] = {4, 3.5, 3, 2.75, 2.5, 2.25, 2, 1.8, 1.6, 1.5, 1.4};
+    std::size_t at = 0;
+    while (ratios[at + 1] >= level.ratio) ++at;
+    at = std::min<std::size_t>(at + 2, std::size(ratios) - 1);
+    return {level.nodes, ratios[at], 0.7 * level.first, 0.3 * level.accuracy};
+}
+
+inline double graded_rung_error(std::size_t rung) {
+    return (rung % 2 ? 0.2 : 1.0) * graded_level_error(rung / 2);
 }
 
 // The coarsest level that aims at `error` or less.
