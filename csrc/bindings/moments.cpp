@@ -1,4 +1,6 @@
 // Explosion times and the strip of finite moments.
+#include <utility>
+
 #include "convert.hpp"
 #include "volterra/explosion.hpp"
 

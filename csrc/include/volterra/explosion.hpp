@@ -151,7 +151,8 @@ inline double critical_moment(const model_parameters& m, double sign, double mat
 inline void require_finite_moment(const model_parameters& m, double p,
                                   std::span<const double> maturities) {
     if ((p >= 0.0 && p <= 1.0) || maturities.empty()) return;
-    const double time = explosion_time(m, p, *std::max_element(maturities.begin(), maturities.end()));
+    const double longest = *std::max_element(maturities.begin(), maturities.end());
+    const double time = explosion_time(m, p, longest);
     const auto beyond = std::find_if(maturities.begin(), maturities.end(),
                                      [&](double maturity) { return maturity >= time; });
     if (beyond == maturities.end()) return;
