@@ -411,6 +411,76 @@ class VolterraHeston:
         result = black.implied_volatility(otm, 1.0, k / f, t, call=k >= f, errors="nan")
         return float(result) if np.ndim(result) == 0 else result
 
+    def moment_strip(self, maturity: float) -> tuple[float, float]:
+        """Critical moments: E[exp(p X_T)] is finite for every p between them.
+
+        Parameters
+        ----------
+        maturity : float
+            T in years, > 0.
+
+        Returns
+        -------
+        lower, upper : float
+            lower <= 0 and upper >= 1, -inf and inf where no moment explodes before the maturity.
+            A Fourier argument u is admissible when ``lower < -u.imag < upper``.
+
+        Raises
+        ------
+        TypeError, ValueError
+            If the maturity is not a positive finite number.
+
+        Notes
+        -----
+        The strip does not depend on the variance curve, which is taken to be positive. Relative
+        error of the distances from 0 and 1 below 1e-8, beside the late explosions described at
+        :meth:`explosion_time` below 1e-4. Cost: the root in p of ``explosion_time(p) = maturity``,
+        1 to 3 ms, 2 microseconds at hurst 1/2. Thread-safe. Published source: Moment explosions in
+        the rough Heston model, arXiv 1801.09458.
+
+        The lowest and highest moments bound the decay of the tails, hence the wings of the smile:
+        The moment formula for implied volatility at extreme strikes, Math. Finance 14, 2004 (from
+        memory). They are moments of the model and carry its risk.
+        """
+        years = finite_number(maturity, "maturity")
+        if years <= 0.0:
+            raise ValueError(f"maturity must be positive, got {years}")
+        return _core.moment_strip(self._core_model, years)
+
+    def explosion_time(self, moment: float) -> float:
+        r"""First maturity at which E[exp(p X_T)] is infinite.
+
+        Parameters
+        ----------
+        moment : float
+            p, any real number.
+
+        Returns
+        -------
+        float
+            Years; inf if the moment is finite at every maturity, as for 0 <= p <= 1.
+
+        Raises
+        ------
+        TypeError, ValueError
+            If the moment is not a finite number.
+
+        Notes
+        -----
+        The blow-up time of the Riccati-Volterra equation
+        :math:`\psi = K * [\tfrac12 (p^2 - p) + (p\rho\nu - \lambda)\psi + \tfrac12\nu^2\psi^2]`.
+        It does not depend on the variance curve, which is taken to be positive. At hurst 1/2 the
+        closed form; else product integration, relative error below 1e-9 as a rule and below 1e-7
+        while the roots of the quadratic, a complex pair, are 1e-5 of their size apart. Where they
+        all but meet the moment explodes late, after 1e7 of the equation's own units of time or
+        more, and that time is good to 1e-4. Cost: 0.06 to 0.3 ms. Thread-safe.
+
+        Published sources: Moment explosions in stochastic volatility models, Finance Stoch. 11,
+        2007 (closed form); Moment explosions in the rough Heston model, arXiv 1801.09458 (a moment
+        explodes exactly when it does in the classical model of the same parameters).
+        """
+        return _core.explosion_time(self._core_model, finite_number(moment, "moment"))
+
     def _out_of_the_money(
         self, moneyness: NDArray[np.float64], maturities: NDArray[np.float64], tolerance: float
     ) -> tuple[NDArray[np.float64], float]:

@@ -96,8 +96,7 @@ private:
             bounds_.line.push_back(entry->second);
             if (!is_new) continue;
             const bool known = y == 0.0 || y == -1.0;  // E[1] = E[exp X] = 1
-            for (std::size_t t = 0; t < maturities_.size() && !known; ++t)
-                require_finite_moment(m_, -y, maturities_[t]);
+            if (!known) require_finite_moment(m_, -y, maturities_);
             // Between the two, exp(p E[X]) <= E[exp(pX)] <= 1, p = -Im u, E[X] >= -int g0 / 2.
             const bool close = -1.0 < y && y < 0.0 && -y * longest < 0.1;
             fixed.push_back(known ? 1.0 : close ? 0.95 : 0.0);
