@@ -12,6 +12,7 @@
 #include <cstdint>
 #include <limits>
 #include <map>
+#include <memory>
 #include <numeric>
 #include <span>
 #include <vector>
@@ -62,7 +63,9 @@ inline constexpr double nearly_linear = 0.1;
 // values last. `rows` maturities each.
 struct raw_rows {
     bool kept[tangent_channels];
-    std::size_t first[tangent_channels], basis, all;
+    bool needs_psi;  // by the scaling law of c2, or for itself
+    bool basis_is_value;  // but for its level: a single elementary curve costs nothing
+    std::size_t first[tangent_channels], basis, basis_rows, all;
 
     raw_rows(const sensitivity_request& wanted, const model_parameters& m,
              const variance_curve& curve, std::size_t rows) {
@@ -71,19 +74,18 @@ struct raw_rows {
         kept[channel_value] = true, kept[channel_c1] = of_c1;
         kept[channel_c2] = wanted.vol_of_vol, kept[channel_alpha] = wanted.hurst;
         kept[channel_psi] = wanted.mean_reversion && !driven;
-        // the scaling law of c2 needs it too
         needs_psi = kept[channel_psi] || (of_c1 && (driven || m.mean_reversion != 0.0));
         all = 0;
         for (std::size_t c = 1; c < tangent_channels; ++c) {
             first[c] = all;
             all += kept[c] ? rows : 0;
         }
-        basis = all;
-        all += wanted.curve ? curve.basis_size() * rows : 0;
+        basis_is_value = wanted.curve && curve.basis_size() == 1 && curve.levels[0] > 0.0;
+        basis = all, basis_rows = wanted.curve && !basis_is_value ? curve.basis_size() * rows : 0;
+        all += basis_rows;
         first[channel_value] = all;
         all += rows;
     }
-    bool needs_psi;
 };
 
 // One solve at one level of the u numbered in `which`; raw[r * u.size() + i]: row r of `layout` at u[i]. `solved` and `doubt` per u, as in graded_record.
@@ -94,7 +96,7 @@ inline void tangent_pass(const target_kernels& kernels, const graded_level& leve
                          const raw_rows& layout, bool one_mesh, std::span<std::complex<double>> raw,
                          graded_record& record) {
     const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes, n = which.size();
-    const std::size_t rows = maturities.size(), basis_rows = wanted.curve ? curve.basis_size() * rows : 0;
+    const std::size_t rows = maturities.size(), basis_rows = layout.basis_rows;
     const double horizon = maturities.back(), alpha = m.alpha();
     std::vector<riccati_coefficients> c(n);
     std::vector<std::size_t> elements(n), order(n);
@@ -112,7 +114,7 @@ inline void tangent_pass(const target_kernels& kernels, const graded_level& leve
     const graded_meshes meshes(*plan, horizon, most);
     std::vector<double> log_edges;
     for (const double edge : meshes.edges) log_edges.push_back(std::log(edge));
-    const auto shares = make_tangent_shares(meshes, curve, maturities, wanted.curve);
+    const auto shares = make_tangent_shares(meshes, curve, maturities, basis_rows != 0);
     std::vector<tangent_entries> entries(4 * most);
     tangent_entries *const on_f = entries.data(), *const on_psi = on_f + most,
                     *const basis_f = on_psi + most, *const basis_psi = basis_f + most;
@@ -160,7 +162,7 @@ inline void tangent_pass(const target_kernels& kernels, const graded_level& leve
         std::size_t end = start;
         while (end < n && elements[order[end]] == k) ++end;
         const auto first =
-            make_first_tangent_share(meshes, *tangent, k, curve, maturities, wanted.curve);
+            make_first_tangent_share(meshes, *tangent, k, curve, maturities, basis_rows != 0);
         for (std::size_t e = 0; e < k; ++e) {
             const auto& share = e ? shares[skipped + e - 1] : first;
             on_f[e] = share.on_f.view(), on_psi[e] = share.on_psi.view();
@@ -267,39 +269,41 @@ inline bool tangent_line(const target_kernels& kernels, const graded_level& leve
     if (std::ranges::count(record.solved, 0) != 0) return false;
     // d/dc1 and the functional of psi stay moderate along the line, unlike all other rows: their
     // interpolants are not scaled, which takes the opposite factor here.
-    auto is_flat = [&](std::size_t r) {
-        auto within = [&](std::size_t c) {
-            return layout.kept[c] && r >= layout.first[c] && r < layout.first[c] + rows;
-        };
-        return within(channel_c1) || within(channel_psi);
-    };
+    std::vector<char> flat(layout.all, 0);
+    for (const auto c : {channel_c1, channel_psi})
+        if (layout.kept[c]) std::fill_n(flat.begin() + static_cast<std::ptrdiff_t>(layout.first[c]), rows, 1);
     for (std::size_t r = 0; r < layout.all; ++r)
-        for (std::size_t j = 0; is_flat(r) && j < nodes; ++j)
+        for (std::size_t j = 0; flat[r] && j < nodes; ++j)
             at_nodes[r * nodes + j] *= line.grid.scale[j];
     const auto tails = line_tails(line.grid, at_nodes);
     for (std::size_t r = 0; r < layout.all; ++r) {
-        const bool of_value = r >= layout.first[channel_value], flat = is_flat(r);
-        double largest = 0.0, error = 0.0;
-        for (std::size_t j = 0; j < nodes; ++j) {
-            const auto value = at_nodes[r * nodes + j];
-            const double scale = line.grid.scale[j], tail = tails[r] * (flat ? 1.0 : scale);
-            largest = std::max(largest, std::abs(value) / (flat ? scale : 1.0));
-            error = std::max(error, of_value ? tail * std::exp(std::min(value.real(), 0.0)) : tail);
+        const std::complex<double>* const row = at_nodes.data() + r * nodes;
+        if (r >= layout.first[channel_value]) {
+            for (std::size_t j = 0; j < nodes; ++j)
+                if (!(tails[r] * line.grid.scale[j] * std::exp(std::min(row[j].real(), 0.0)) <=
+                      0.3 * wanted.tolerance))
+                    return false;
+            continue;
         }
-        const double allowed = of_value ? 1.0 : sensitivity_accuracy * largest;
-        if (!(error <= 0.3 * wanted.tolerance * allowed)) return false;
+        double largest = 0.0;  // square
+        for (std::size_t j = 0; j < nodes; ++j) {
+            const double scale = flat[r] ? line.grid.scale[j] : 1.0;
+            largest = std::max(largest, std::norm(row[j]) / (scale * scale));
+        }
+        const double error = tails[r] * (flat[r] ? 1.0 : line.grid.scale[0]);  // nodes descend
+        if (!(error <= sensitivity_accuracy * wanted.tolerance * std::sqrt(largest))) return false;
     }
     // values are the combination of the elementary curves where these are wanted
-    const std::size_t served = wanted.curve ? layout.first[channel_value] : layout.all;
+    const std::size_t served = layout.basis_rows ? layout.first[channel_value] : layout.all;
     interpolate_line(kernels, line.grid, std::span(at_nodes).first(served * nodes), u, line.members, raw);
     const std::size_t n = u.size();
     std::vector<double> unscale;
     for (const std::size_t i : line.members) unscale.push_back(1.0 / line_scale(u[i].real()));
     for (std::size_t r = 0; r < served; ++r)
-        for (std::size_t k = 0; is_flat(r) && k < unscale.size(); ++k)
+        for (std::size_t k = 0; flat[r] && k < unscale.size(); ++k)
             raw[r * n + line.members[k]] *= unscale[k];
     const bool driven = curve.form == curve_form::driven;
-    for (std::size_t k = 0; wanted.curve && k < curve.basis_size(); ++k) {
+    for (std::size_t k = 0; layout.basis_rows && k < curve.basis_size(); ++k) {
         const double level_of = driven ? (k ? curve.levels[k - 1] : curve.initial) : curve.levels[k];
         for (std::size_t t = 0; t < rows; ++t) {
             const std::complex<double>* const from = raw.data() + (layout.basis + k * rows + t) * n;
@@ -342,7 +346,8 @@ inline std::size_t solve_log_sensitivities(const target_kernels& kernels, const 
     }
     bounds.lines = imaginary.size();
 
-    std::vector<std::complex<double>> raw(layout.all * n);
+    const auto storage = std::make_unique_for_overwrite<double[]>(2 * layout.all * n);
+    const std::span raw(reinterpret_cast<std::complex<double>*>(storage.get()), layout.all * n);
     std::vector<char> open(n, 1);
     const std::size_t coarsest = graded_level_for(wanted.tolerance);
     if (m.hurst < 0.5) {
@@ -383,12 +388,15 @@ inline std::size_t solve_log_sensitivities(const target_kernels& kernels, const 
                 auto& sum = value[t * n + i] = driven ? curve.initial * elementary[0] : 0.0;
                 for (std::size_t k = 0; k < curve.levels.size(); ++k)
                     sum += curve.levels[k] * elementary[k + driven];
-                for (std::size_t k = 0; wanted.curve && k < elementary.size(); ++k)
+                for (std::size_t k = 0; layout.basis_rows && k < elementary.size(); ++k)
                     raw[(layout.basis + k * rows + t) * n + i] = elementary[k];
             }
     }
     std::copy_n(value, rows * n, values.data());
-    std::copy_n(raw.data() + layout.basis * n, basis.size(), basis.data());
+    if (layout.basis_is_value)
+        for (std::size_t k = 0; k < basis.size(); ++k) basis[k] = value[k] / curve.levels[0];
+    else
+        std::copy_n(raw.data() + layout.basis * n, basis.size(), basis.data());
     detail::to_parameters(m, curve, u, rows, wanted, layout, raw, sensitivities);
     return missed;
 }
