@@ -360,7 +360,7 @@ inline std::size_t solve_log_sensitivities(const target_kernels& kernels, const 
     graded_record record(n);
     std::vector<std::size_t> which;
     std::complex<double>* const value = raw.data() + layout.first[channel_value] * n;
-    for (std::size_t level = coarsest; level < graded_levels; ++level) {
+    for (std::size_t level = coarsest; level + 1 < graded_levels; ++level) {
         which.clear();
         for (std::size_t i = 0; i < n; ++i)
             if (open[i]) which.push_back(i);
