@@ -188,11 +188,10 @@ def test_shapes_and_order_of_maturities():
 
 @pytest.mark.parametrize("driven", [False, True])
 def test_trivial_arguments(driven):
-    """E[1] = E[exp X] = 1 whatever the parameters; u = 0 lies on an interpolated line."""
+    """E[1] = E[exp X] = 1 whatever the parameters."""
     found = make_model(0.1, 0.4, -0.7, 0.5, driven).transform_sensitivities([0.0, -1j], [0.1, 2.0])
     for array in (found.values, *found.derivatives.values()):
-        assert np.abs(array[..., 1]).max() == 0.0
-        assert np.abs(array[..., 0]).max() < 1e-8
+        assert np.all(array == 0.0)
 
 
 def test_a_missed_tolerance_is_told():

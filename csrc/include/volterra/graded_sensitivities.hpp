@@ -375,6 +375,10 @@ inline std::size_t solve_log_sensitivities(const target_kernels& kernels, const 
     constexpr double nan = std::numeric_limits<double>::quiet_NaN();
     std::size_t missed = 0;
     for (std::size_t i = 0; i < n; ++i) {
+        if (u[i] == 0.0 || u[i] == std::complex<double>{0.0, -1.0}) {  // phi = 1 for all parameters
+            for (std::size_t r = 0; r < layout.all; ++r) raw[r * n + i] = 0.0;
+            continue;
+        }
         missed += open[i] != 0;
         for (std::size_t r = 0; open[i] && !record.solved[i] && r < layout.all; ++r)
             raw[r * n + i] = {nan, nan};
