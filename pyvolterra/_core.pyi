@@ -23,6 +23,15 @@ def log_transform(
     threads: int = 1,
     estimate: bool = True,
 ) -> tuple[_Complexes, _Floats, float]: ...
+def transform_sensitivities(
+    model: _Model,
+    curve: _Curve,
+    u: _Complexes,
+    maturities: _Floats,
+    wanted: tuple[bool, ...],
+    tolerance: float,
+    threads: int = 1,
+) -> tuple[_Complexes, _Complexes, _Complexes, int]: ...
 def adams_solution(
     model: _Model, u: _Complexes, horizon: float, steps: int, instruction_set: str = ""
 ) -> _Complexes: ...

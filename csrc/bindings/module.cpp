@@ -7,6 +7,7 @@ void bind_build_info(pybind11::module_&);
 void bind_moments(pybind11::module_&);
 void bind_price(pybind11::module_&);
 void bind_resolvents(pybind11::module_&);
+void bind_sensitivities(pybind11::module_&);
 void bind_transform(pybind11::module_&);
 }  // namespace volterra::bindings
 
@@ -17,6 +18,7 @@ PYBIND11_MODULE(_core, module) {
     bind_resolvents(module);
     bind_transform(module);
     bind_moments(module);
+    bind_sensitivities(module);
     bind_price(module);
     bind_black(module);
 }

@@ -7,6 +7,7 @@ namespace volterra {
 
 const target_kernels kernels_avx2 = {"avx2", avx2::adams_lanes, avx2::solve_adams_block,
                                    avx2::graded_lanes, avx2::solve_graded_block,
+                                   avx2::solve_graded_tangents_block,
                                    avx2::sum_series, avx2::interpolate_line,
                                    avx2::estimate_error};
 

@@ -7,6 +7,7 @@ namespace volterra {
 
 const target_kernels kernels_avx512 = {"avx512", avx512::adams_lanes, avx512::solve_adams_block,
                                    avx512::graded_lanes, avx512::solve_graded_block,
+                                   avx512::solve_graded_tangents_block,
                                    avx512::sum_series, avx512::interpolate_line,
                                    avx512::estimate_error};
 

@@ -7,6 +7,7 @@ namespace volterra {
 
 const target_kernels kernels_baseline = {"baseline", baseline::adams_lanes, baseline::solve_adams_block,
                                    baseline::graded_lanes, baseline::solve_graded_block,
+                                   baseline::solve_graded_tangents_block,
                                    baseline::sum_series, baseline::interpolate_line,
                                    baseline::estimate_error};
 

@@ -6,6 +6,7 @@
 #include "volterra/adams.hpp"
 #include "volterra/error_estimate.hpp"
 #include "volterra/graded.hpp"
+#include "volterra/graded_tangent.hpp"
 #include "volterra/line_interpolation.hpp"
 #include "volterra/sum_series.hpp"
 
@@ -17,6 +18,7 @@ struct target_kernels {
     void (*solve_adams_block)(const adams_block&);
     std::size_t graded_lanes;
     void (*solve_graded_block)(const graded_block&);
+    void (*solve_graded_tangents_block)(const tangent_block&);
     void (*sum_series)(const double* series, std::size_t stride, std::size_t terms,
                        const double* factor, std::size_t count, double* sum);
     void (*interpolate_line)(const line_block&);

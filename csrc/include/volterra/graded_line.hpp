@@ -86,15 +86,14 @@ inline std::vector<double> line_tails(const line_grid& grid,
                          static_cast<double>(4 * nodes));
     std::vector<double> tails;
     for (std::size_t r = 0; r * nodes < at_nodes.size(); ++r) {
-        double most = 0.0;
-        for (std::size_t k = 0; k < last; ++k) {
-            double sum = 0.0;  // odd coefficients belong to the imaginary part, even ones to the real
-            for (std::size_t j = 0; j < nodes; ++j) {
-                const auto value = at_nodes[r * nodes + j];
-                sum += cosines[k * nodes + j] * (k % 2 ? value.real() : value.imag());
-            }
-            most = std::max(most, std::abs(sum));
+        double sums[last] = {};  // odd coefficients belong to the imaginary part, even ones to the real
+        for (std::size_t j = 0; j < nodes; ++j) {
+            const auto value = at_nodes[r * nodes + j];
+            for (std::size_t k = 0; k < last; ++k)
+                sums[k] += cosines[k * nodes + j] * (k % 2 ? value.real() : value.imag());
         }
+        double most = 0.0;
+        for (const double sum : sums) most = std::max(most, std::abs(sum));
         tails.push_back(most);
     }
     return tails;

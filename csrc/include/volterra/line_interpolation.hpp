@@ -56,23 +56,32 @@ inline void interpolate_line(const line_block& b) {
                 store(d + j * step + c * pack_width, value);
             }
         for (std::size_t c = 0; c < wide; ++c) sum[c] = load(b.scale + at + c * pack_width) / sum[c];
-        for (std::size_t r = 0; r < b.rows; ++r) {
-            const double *const even = b.even + r * b.nodes, *const odd = b.odd + r * b.nodes;
-            pack re[wide] = {}, im[wide] = {};
+        auto rows = [&]<std::size_t together>(std::size_t r) {
+            pack re[together][wide] = {}, im[together][wide] = {};
             for (std::size_t j = 0; j < b.nodes; ++j) {
-                const pack e = broadcast(even[j]), o = broadcast(odd[j]);
-                for (std::size_t c = 0; c < wide; ++c) {
-                    const pack value = load(d + j * step + c * pack_width);
-                    re[c] += e * value;
-                    im[c] += o * value;
+                pack value[wide];
+                for (std::size_t c = 0; c < wide; ++c) value[c] = load(d + j * step + c * pack_width);
+                for (std::size_t k = 0; k < together; ++k) {
+                    const pack e = broadcast(b.even[(r + k) * b.nodes + j]);
+                    const pack o = broadcast(b.odd[(r + k) * b.nodes + j]);
+                    for (std::size_t c = 0; c < wide; ++c) {
+                        re[k][c] += e * value[c];
+                        im[k][c] += o * value[c];
+                    }
                 }
             }
-            double* const to = b.values + r * 2 * b.count + at;
-            for (std::size_t c = 0; c < wide; ++c) {
-                store(to + c * pack_width, re[c] * sum[c]);
-                store(to + b.count + c * pack_width, s[c] * (im[c] * sum[c]));
+            for (std::size_t k = 0; k < together; ++k) {
+                double* const to = b.values + (r + k) * 2 * b.count + at;
+                for (std::size_t c = 0; c < wide; ++c) {
+                    store(to + c * pack_width, re[k][c] * sum[c]);
+                    store(to + b.count + c * pack_width, s[c] * (im[k][c] * sum[c]));
+                }
             }
-        }
+        };
+        // two rows at a time: enough independent sums to keep the multipliers busy
+        std::size_t r = 0;
+        for (; r + 2 <= b.rows; r += 2) rows.template operator()<2>(r);
+        if (r < b.rows) rows.template operator()<1>(r);
     }
 }
 
