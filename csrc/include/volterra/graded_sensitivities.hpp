@@ -41,15 +41,16 @@ struct sensitivity_request {
 // The u solved for at a time: few enough to keep the working memory small.
 inline constexpr std::size_t sensitivity_chunk = 1024;
 
-// Errors of the sensitivities are held below this times the tolerance, relative to the largest of the line.
+// Errors of the sensitivities are held below this times the tolerance, relative to the largest of
+// the line.
 inline constexpr double sensitivity_accuracy = 10.0;
 
 namespace detail {
 
-// The mesh whose sensitivities are as good as the values of `level`: one level finer, for hurst loses
-// a factor 20 to 40 against phi on the same mesh, and a first element short enough for relative accuracy
-// at the shortest maturities. Measured in 800 random cases: every sensitivity within 1.2e-7 of the
-// largest along the line at tolerance 1e-8, 99 % within 5e-8.
+// The mesh whose sensitivities are as good as the values of `level`: one level finer, for hurst
+// loses a factor 20 to 40 against phi on the same mesh, and a first element short enough for relative
+// accuracy at the shortest maturities. Measured against the finest mesh at tolerance 1e-8: in 3,190 of 3,200
+// random models every sensitivity is within 1e-7 of the largest along its line, the worst at 6e-7.
 inline graded_level tangent_ladder(double hurst, std::size_t level) {
     auto rung = graded_ladder(hurst, std::min(level + 1, graded_levels - 1));
     rung.first *= 0.4;
@@ -88,7 +89,8 @@ struct raw_rows {
     }
 };
 
-// One solve at one level of the u numbered in `which`; raw[r * u.size() + i]: row r of `layout` at u[i]. `solved` and `doubt` per u, as in graded_record.
+// One solve at one level of the u numbered in `which`; raw[r * u.size() + i]: row r of `layout` at
+// u[i]. Of `record` it fills `solved` and `doubt`.
 inline void tangent_pass(const target_kernels& kernels, const graded_level& level,
                          const model_parameters& m, const variance_curve& curve,
                          std::span<const std::complex<double>> u, std::span<const std::size_t> which,
@@ -271,7 +273,7 @@ inline bool tangent_line(const target_kernels& kernels, const graded_level& leve
     // interpolants are not scaled, which takes the opposite factor here.
     std::vector<char> flat(layout.all, 0);
     for (const auto c : {channel_c1, channel_psi})
-        if (layout.kept[c]) std::fill_n(flat.begin() + static_cast<std::ptrdiff_t>(layout.first[c]), rows, 1);
+        if (layout.kept[c]) std::fill_n(flat.data() + layout.first[c], rows, 1);
     for (std::size_t r = 0; r < layout.all; ++r)
         for (std::size_t j = 0; flat[r] && j < nodes; ++j)
             at_nodes[r * nodes + j] *= line.grid.scale[j];
@@ -295,7 +297,8 @@ inline bool tangent_line(const target_kernels& kernels, const graded_level& leve
     }
     // values are the combination of the elementary curves where these are wanted
     const std::size_t served = layout.basis_rows ? layout.first[channel_value] : layout.all;
-    interpolate_line(kernels, line.grid, std::span(at_nodes).first(served * nodes), u, line.members, raw);
+    interpolate_line(kernels, line.grid, std::span(at_nodes).first(served * nodes), u, line.members,
+                     raw);
     const std::size_t n = u.size();
     std::vector<double> unscale;
     for (const std::size_t i : line.members) unscale.push_back(1.0 / line_scale(u[i].real()));

@@ -84,7 +84,7 @@ namespace volterra::VOLTERRA_TARGET {
 
 namespace graded_detail {
 
-// Factors of the complex matrix `inverse` - diag(slope), `inverse` column-major: reciprocal pivots on the diagonal,
+// Factors of `inverse` - diag(slope), `inverse` column-major: reciprocal pivots on the diagonal,
 // rows of U divided by them. The first column of L stays real.
 template <std::size_t m>
 VOLTERRA_INLINE void factor_tangent(const double* inverse, const double* slope,

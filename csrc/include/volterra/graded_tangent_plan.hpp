@@ -117,8 +117,8 @@ inline graded_tangent_plan make_graded_tangent_plan(const target_kernels& kernel
     return to;
 }
 
-// The tangent plan that belongs to `plan`, shared with whoever asked for it lately. Safe to call from any
-// thread; two threads that miss at once both make it.
+// The tangent plan that belongs to `plan`, shared with whoever asked for it lately. Safe to call from
+// any thread; two threads that miss at once both make it.
 inline std::shared_ptr<const graded_tangent_plan> tangent_plan_of(
     const target_kernels& kernels, const std::shared_ptr<const graded_plan>& plan) {
     using entry = std::pair<std::shared_ptr<const graded_plan>,

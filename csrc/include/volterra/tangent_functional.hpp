@@ -109,7 +109,8 @@ inline void add_first_end(const graded_plan& plan, const graded_tangent_plan& ta
     add(legendre, coefficient * time, points);
 }
 
-// Calls end(row, basis_row, on_psi, time, coefficient, basis_coefficient) for the ends of all integrals.
+// Calls end(row, basis_row, on_psi, time, coefficient, basis_coefficient) for the ends of all
+// integrals.
 template <class Visit>
 void for_each_end(const variance_curve& curve, std::span<const double> maturities, Visit&& end) {
     const bool driven = curve.form == curve_form::driven;
