@@ -60,3 +60,64 @@ def require(condition: NDArray[np.bool_], values: NDArray[Any], name: str, rule:
     where = tuple(int(i) for i in np.argwhere(~condition)[0])
     at = f"{name}[{', '.join(map(str, where))}]" if where else name
     raise ValueError(f"{at} must be {rule}, got {values[where]}")
+
+
+def positive_number(value: object, name: str) -> float:
+    """A finite real scalar above zero."""
+    number = finite_number(value, name)
+    if number <= 0.0:
+        raise ValueError(f"{name} must be positive, got {number}")
+    return number
+
+
+LARGEST_ARGUMENT = 1e8
+"""Largest modulus of a Fourier argument."""
+
+LONGEST_MATURITY = 1000.0
+"""Years."""
+
+
+def _at_most_1d(array: NDArray[Any], name: str) -> None:
+    if array.ndim > 1:
+        raise ValueError(f"{name} must be a scalar or one-dimensional, got {array.shape}")
+
+
+def fourier_arguments(value: object) -> NDArray[np.complex128]:
+    """Arguments u of a transform."""
+    array = finite_complex(value, "u")
+    _at_most_1d(array, "u")
+    size = np.maximum(abs(array.real), abs(array.imag))
+    require(size <= LARGEST_ARGUMENT, array, "u", f"at most {LARGEST_ARGUMENT:.0e} in modulus")
+    return array
+
+
+def positive_maturities(value: object, dimensions: int | None = None) -> NDArray[np.float64]:
+    """Maturities in years; with ``dimensions=1`` a scalar or one-dimensional."""
+    array = finite_reals(value, "maturities")
+    if dimensions == 1:
+        _at_most_1d(array, "maturities")
+    require(array > 0.0, array, "maturities", "positive")
+    require(array <= LONGEST_MATURITY, array, "maturities", f"at most {LONGEST_MATURITY:.0f} years")
+    return array
+
+
+def positive_reals(**arguments: object) -> tuple[NDArray[np.float64], ...]:
+    """Positive arrays by name, the maturities within their limit."""
+    arrays = []
+    for name, value in arguments.items():
+        if name == "maturities":
+            arrays.append(positive_maturities(value))
+            continue
+        array = finite_reals(value, name)
+        require(array > 0.0, array, name, "positive")
+        arrays.append(array)
+    return tuple(arrays)
+
+
+def broadcast(**arguments: NDArray[Any]) -> tuple[NDArray[Any], ...]:
+    """The arrays broadcast against each other; a ValueError names all shapes if they do not."""
+    try:
+        return tuple(np.broadcast_arrays(*arguments.values()))
+    except ValueError:
+        shapes = ", ".join(f"{name} {array.shape}" for name, array in arguments.items())
+        raise ValueError(f"shapes do not broadcast: {shapes}") from None

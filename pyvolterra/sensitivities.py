@@ -9,7 +9,12 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from . import _core
-from ._validation import finite_complex, finite_number, finite_reals, positive_integer, require
+from ._validation import (
+    fourier_arguments,
+    positive_integer,
+    positive_maturities,
+    positive_number,
+)
 from .errors import AccuracyWarning
 from .threads import default_threads
 
@@ -51,15 +56,9 @@ def transform_sensitivities(
     threads: int | None,
 ) -> TransformSensitivities:
     """See :meth:`pyvolterra.VolterraHeston.transform_sensitivities`."""
-    nodes = finite_complex(u, "u")
-    times = finite_reals(maturities, "maturities")
-    for array, name in ((nodes, "u"), (times, "maturities")):
-        if array.ndim > 1:
-            raise ValueError(f"{name} must be a scalar or one-dimensional, got {array.shape}")
-    require(times > 0.0, times, "maturities", "positive")
-    bound = finite_number(tolerance, "tolerance")
-    if bound <= 0.0:
-        raise ValueError(f"tolerance must be positive, got {bound}")
+    nodes = fourier_arguments(u)
+    times = positive_maturities(maturities, dimensions=1)
+    bound = positive_number(tolerance, "tolerance")
     driven = model.forward_variance.form == "driven"
     names = _names(parameters, driven)
     workers = default_threads() if threads is None else positive_integer(threads, "threads")

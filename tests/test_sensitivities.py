@@ -263,7 +263,10 @@ def test_instruction_sets_agree(tmp_path):
         path = str(tmp_path / name)
         environment = {**os.environ, "PYVOLTERRA_INSTRUCTION_SET": name}
         subprocess.run(
-            [sys.executable, "-c", SCRIPT.format(path=path)], env=environment, check=True
+            [sys.executable, "-c", SCRIPT.format(path=path)],
+            env=environment,
+            cwd=tmp_path,  # not the checkout: the installed package is meant
+            check=True,
         )
         results.append(np.fromfile(path, complex))
     for other in results[1:]:
