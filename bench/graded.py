@@ -3,13 +3,13 @@
 
     python bench/graded.py [--json FILE] [--picture FILE.png]
 
-One run, one thread unless said otherwise; every instruction set of the machine runs in a process
-of its own. The yardstick is the closed form of the classical model (hurst 1/2) in vectorised NumPy
-on the same grid: 20 maturities from a week to three years, 256 arguments u in [0, 300] - i/2. Every timed
-call of the rough transform has a hurst index that was never seen before, so its weights are part
-of the time, as are the mesh, the checks of the arguments and Python's own overhead. Times are
-minima of many calls; only ratios within a run mean anything. Results are compared with a solution
-at tolerance 1e-13 before they are timed.
+One run, one thread unless said otherwise; every instruction set of the machine runs in a
+process of its own. The yardstick is the closed form of the classical model (hurst 1/2) in
+vectorised NumPy on the same grid: 20 maturities from a week to three years, 256 arguments u in
+[0, 300] - i/2. Every timed call of the rough transform has a hurst index that was never seen
+before, so its weights are part of the time, as are the mesh, the checks of the arguments and
+Python's own overhead. Times are minima of many calls; only ratios within a run mean anything.
+Results are compared with a solution at tolerance 1e-13 before they are timed.
 """
 
 import argparse
