@@ -83,6 +83,7 @@ inline double adams_error(std::complex<double> coarse, std::complex<double> midd
     const double rate = std::max(last / before, 0.25);
     if (!(rate < slowest)) return largest;
     const double left = 2.0 * last * rate / (1.0 - rate);
+    if (!(left < 0.1)) return largest;  // the rate is not to be trusted yet
     return std::min(std::exp(fine.real()) * std::expm1(left), largest);
 }
 
