@@ -297,7 +297,13 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
     graded_record coarse(n);
     if (interpolate)
         for (auto& line : lines_of(m, curve, u, maturities, bounds, bound)) {
-            if (!pass_line(line, values)) continue;
+            bool good = pass_line(line, values);
+            if (!good) {  // once more with more nodes
+                line.grid = make_line_grid(m, line.grid.imaginary, maturities.back(), line.variance,
+                                           1e-4 * line.tolerance);
+                good = pass_line(line, values);
+            }
+            if (!good) continue;
             for (const std::size_t i : line.members)
                 coarse.solved[i] = true, open[i] = false, level[i] = line.level;
             lines.push_back(std::move(line));
