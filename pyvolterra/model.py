@@ -247,8 +247,9 @@ class VolterraHeston:
         -----
         With ``full_output`` every u of ``"graded"`` is solved a second time on a finer mesh, and
         again until the estimated error meets the tolerance. Without, the mesh is trusted where the
-        solver's own indicator raises no doubt: about twice as fast, and in 600,000 random values
-        (see ``bench/accuracy.py`` for the ranges) none was beyond its tolerance. The estimate of
+        solver's own indicator raises no doubt: about twice as fast, and in 400,000 random values at
+        1e-8 and 1e-10 (vol_of_vol .1 to 1, correlation -.99 to .5, mean reversion 0 to 3, a day to
+        10 years, |u| to 1000) none was beyond its tolerance. The estimate of
         ``"adams"`` extrapolates three meshes. All include a rounding bound.
 
         Values never depend on the other u of the call, bit for bit; those of ``"graded"`` depend,
@@ -285,7 +286,7 @@ class VolterraHeston:
         if steps is None and not worst <= 1.0:
             _warn_of_accuracy(
                 f"tolerance {bound:.1e} not met: estimated error {worst * bound:.1e} of the "
-                "characteristic function relative to its value at i Im u"
+                "characteristic function relative to its value at i Im u" + self._doubt_of_curve()
             )
         shape = times.shape + nodes.shape
         result: Any = values.reshape(shape) if shape else complex(values[0, 0])
@@ -293,6 +294,15 @@ class VolterraHeston:
             return result
         return result, TransformInfo(
             errors.reshape(shape) if shape else float(errors[0, 0]), self._scheme_used(scheme)
+        )
+
+    def _doubt_of_curve(self) -> str:
+        """What a warning says about a curve that the model cannot have."""
+        if self.forward_variance.is_admissible(self.kernel):
+            return ""
+        return (
+            "; the forward-variance curve falls faster than the model allows (its variance would "
+            "become negative), so that the characteristic function may be larger than 1"
         )
 
     def _scheme_used(self, scheme: str) -> str:

@@ -1,6 +1,6 @@
 // The error of phi from two solutions, one row (one maturity) at a time, once per instruction set.
 //
-//     |phi| ( 4 |d| + (1.2 r + least) max(1, |log phi|) + 2 tail + floor ),
+//     |phi| ( 4 |d| + (1.2 r + least) max(1, |log phi|) + 5 tail + floor ),
 //
 // d the difference of log phi, tail what interpolation may neglect,
 // r the largest |d| / max(1, |log phi|) at this and all shorter maturities: a difference can vanish
@@ -64,7 +64,7 @@ VOLTERRA_INLINE void estimate_pack(const estimate_row& b, std::size_t at, std::s
     const pack relative = now > so_far ? now : so_far;
     const pack floor = 1.7763568394002505e-15 * (load(c) * broadcast(b.integral) + scale);
     const pack total = modulus * (4.0 * difference + (1.2 * relative + load(l)) * scale +
-                                  (2.0 * b.tail) * load(w) + floor);
+                                  (5.0 * b.tail) * load(w) + floor);
     const pack shown = 0.3 * (modulus * difference);
     double keep[pack_width], out[pack_width], more[pack_width];
     store(keep, relative), store(out, total), store(more, shown);

@@ -289,7 +289,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
         for (std::size_t t = 0; t < maturities.size(); ++t)
             for (std::size_t j = 0; j < nodes; ++j)
                 if (!(line.tails[t] * line.grid.scale[j] * std::exp(at_nodes[t * nodes + j].real()) <
-                      0.3 * bounds(t, line.members.front())))
+                      0.1 * bounds(t, line.members.front())))
                     return false;
         interpolate_line(kernels, line.grid, at_nodes, u, line.members, into);
         return true;
