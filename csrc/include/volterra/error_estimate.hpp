@@ -59,7 +59,8 @@ VOLTERRA_INLINE void estimate_pack(const estimate_row& b, std::size_t at, std::s
     scale = scale > 1.0 ? scale : broadcast(1.0);
     // |exp(d) - 1| for small d, never below it
     const pack step = sqrt(d_re * d_re + d_im * d_im);
-    const pack difference = step < 1.0 ? step * (1.0 + step) : rough_exp(d_re < 0.0 ? broadcast(0.0) : d_re) + 1.0;
+    const pack larger = rough_exp(d_re < 0.0 ? broadcast(0.0) : d_re) + 1.0;
+    const pack difference = step < 1.0 ? step * (1.0 + step) : larger;
     const pack now = difference / scale, so_far = load(r);
     const pack relative = now > so_far ? now : so_far;
     const pack floor = 1.7763568394002505e-15 * (load(c) * broadcast(b.integral) + scale);
