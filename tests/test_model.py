@@ -281,7 +281,7 @@ def test_bad_parameters(arguments, error, message):
 
 def test_negative_spot_variance_is_named():
     common = {"vol_of_vol": 0.3, "correlation": -0.7, "mean_reversion": 1.0}
-    with pytest.raises(ValueError, match="initial_variance must be a variance"):
+    with pytest.raises(ValueError, match="initial_variance must be non-negative"):
         pv.VolterraHeston.from_spot_variance(
             pv.ConstantKernel(), initial_variance=-0.1, long_run_variance=0.1, **common
         )
