@@ -28,8 +28,15 @@ class CleaningRules:
 
     Attributes
     ----------
+    max_strike_factor : float, default 100
+        Strikes further from the median strike than this factor are of another unit or mistyped;
+        no price is over so many median strikes either.
+    min_relative_price : float, default 1e-9
+        No price but zero is below this many median strikes.
     min_maturity_hours : float, default 12
         Shorter expiries go: their volatility hangs on minutes and on the settlement.
+    max_maturity_years : float, default 50
+        No option is listed for longer: a placeholder such as the year 9999.
     max_age_seconds : float, default 3600
         Quotes last changed longer before the quote time are stale.
     max_clock_skew_seconds : float, default 300
@@ -47,7 +54,10 @@ class CleaningRules:
         Strikes with an out-of-the-money quote that an expiry needs.
     """
 
+    max_strike_factor: float = 100.0
+    min_relative_price: float = 1e-9
     min_maturity_hours: float = 12.0
+    max_maturity_years: float = 50.0
     max_age_seconds: float = 3600.0
     max_clock_skew_seconds: float = 300.0
     max_relative_width: float = 1.6
@@ -83,7 +93,8 @@ def clean_quotes(
 
     Notes
     -----
-    What goes: quotes without an ask, crossed (bid above ask), locked (bid equal to ask: no width to
+    What goes: strikes and prices of another order of magnitude, expiries too far ahead, quotes
+    without an ask, crossed (bid above ask), locked (bid equal to ask: no width to
     weigh them by), without a bid, of too short an expiry, stale by their last update, updated after
     the quote time, duplicates (the last updated stays, then the tightest), far too wide, in
     conflict with their neighbours by static arbitrage beyond bid and ask, and expiries with too few
@@ -137,6 +148,36 @@ def cleaning_table(rejections: Iterable[Rejection]) -> list[tuple[str, str, int,
     return sorted(table, key=lambda entry: (entry[0] != "parse", -entry[2], entry[1]))
 
 
+def _median_strike(quotes: Quotes) -> float:
+    # The lower of two middle ones: their mean may overflow.
+    middle = (len(quotes) - 1) // 2
+    return float(np.partition(quotes.strike, middle)[middle]) if len(quotes) else np.nan
+
+
+def absurd_strike(quotes: Quotes, rules: CleaningRules) -> Drops:
+    """A strike of another order of magnitude is mistyped, and would swamp those beside it."""
+    typical, factor = _median_strike(quotes), rules.max_strike_factor
+    high, low = quotes.strike / factor > typical, quotes.strike < typical / factor
+    return {
+        int(i): f"strike is {quotes.strike[i]:g}, must be within a factor {factor:g} of the median "
+        f"strike {typical:g}"
+        for i in np.flatnonzero(high | low)
+    }
+
+
+def absurd_price(quotes: Quotes, rules: CleaningRules) -> Drops:
+    """No option is worth more than its underlying or its strike, or quoted in such fractions."""
+    typical = min(_median_strike(quotes), 1e300)
+    high, low = rules.max_strike_factor * typical, rules.min_relative_price * typical
+    dearer = np.maximum(quotes.bid, quotes.ask)
+    drop = (dearer > high) | ((dearer < low) & (dearer > 0.0))
+    return {
+        int(i): f"bid {quotes.bid[i]:g} and ask {quotes.ask[i]:g}, must be between {low:g} and "
+        f"{high:g}, at strikes round {typical:g}"
+        for i in np.flatnonzero(drop)
+    }
+
+
 def no_ask(quotes: Quotes, rules: CleaningRules) -> Drops:
     """Nobody sells: there is no upper bound on the price."""
     drop = np.flatnonzero(quotes.ask <= 0.0)
@@ -169,6 +210,16 @@ def too_short(quotes: Quotes, rules: CleaningRules) -> Drops:
     limit = rules.min_maturity_hours
     drop = np.flatnonzero(hours < limit)
     return {int(i): f"expires in {hours[i]:.1f} hours, must be {limit:g} or more" for i in drop}
+
+
+def too_long(quotes: Quotes, rules: CleaningRules) -> Drops:
+    """Nothing is listed so far ahead; the date stands for none, or is mistyped."""
+    limit = rules.max_maturity_years
+    drop = np.flatnonzero(quotes.maturity > limit)
+    return {
+        int(i): f"expires in {quotes.maturity[i]:.0f} years, must be {limit:g} or less"
+        for i in drop
+    }
 
 
 def stale(quotes: Quotes, rules: CleaningRules) -> Drops:
@@ -357,6 +408,9 @@ def too_few_strikes(quotes: Quotes, rules: CleaningRules) -> Drops:
 
 
 RULES: tuple[tuple[str, Callable[[Quotes, CleaningRules], Drops]], ...] = (
+    ("absurd strike", absurd_strike),
+    ("absurd price", absurd_price),
+    ("expires too far ahead", too_long),
     ("no ask", no_ask),
     ("crossed", crossed),
     ("locked", locked),

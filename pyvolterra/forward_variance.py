@@ -9,7 +9,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from . import _core
 from ._validation import finite_number, finite_reals, require
-from .kernels import FractionalKernel, Kernel
+from .kernels import Kernel
 
 # The form in which a curve crosses the border: driven?, initial variance, times, levels.
 CoreCurve = tuple[bool, float, NDArray[np.float64], NDArray[np.float64]]
@@ -30,6 +30,11 @@ class ForwardVariance:
         ``levels[k]`` holds on (``times[k-1]``, ``times[k]``]; the last one continues for ever.
     kernel, initial_variance, mean_reversion
         Of a driven curve; ``None``, 0 and 0 otherwise.
+
+    Raises
+    ------
+    TypeError, ValueError
+        If a value is of the wrong type or out of range, however the curve is built.
     """
 
     form: str
@@ -41,10 +46,47 @@ class ForwardVariance:
     _arguments: CoreCurve = field(init=False, repr=False)
 
     def __post_init__(self) -> None:
-        self.times.setflags(write=False)
-        self.levels.setflags(write=False)
-        core = (self.form == "driven", self.initial_variance, self.times, self.levels)
-        object.__setattr__(self, "_arguments", core)
+        if self.form not in ("market", "driven"):
+            raise ValueError(f"form must be 'market' or 'driven', got {self.form!r}")
+        driven = self.form == "driven"
+        times, levels = _steps(self.times, self.levels)
+        start = _non_negative(self.initial_variance, "initial_variance")
+        reversion = _non_negative(self.mean_reversion, "mean_reversion")
+        if driven and not isinstance(self.kernel, Kernel):
+            raise TypeError(
+                "kernel must be a FractionalKernel or ConstantKernel, "
+                f"got {type(self.kernel).__name__}"
+            )
+        if not driven:
+            require(levels >= 0.0, levels, "levels", "a variance, hence non-negative")
+            if self.kernel is not None or start != 0.0 or reversion != 0.0:
+                raise ValueError(
+                    "kernel, initial_variance and mean_reversion belong to a driven curve; a "
+                    "market curve has None, 0 and 0"
+                )
+        times.setflags(write=False)
+        levels.setflags(write=False)
+        values = {
+            "times": times,
+            "levels": levels,
+            "initial_variance": start,
+            "mean_reversion": reversion,
+            "_arguments": (driven, start, times, levels),
+        }
+        for name, value in values.items():
+            object.__setattr__(self, name, value)
+        if driven:
+            self._check_driven()
+
+    def _check_driven(self) -> None:
+        tolerance = 1e-14 * (self.initial_variance + float(np.abs(self.levels).max()))
+        at_times = self(self.times)
+        if np.any(at_times < -tolerance):
+            k = int(np.argmax(at_times < -tolerance))
+            raise ValueError(
+                f"levels make the forward variance negative: {at_times[k]:.6g} at time "
+                f"{self.times[k]:.6g}"
+            )
 
     @classmethod
     def flat(cls, level: float) -> Self:
@@ -76,9 +118,7 @@ class ForwardVariance:
         A curve with a down-step is not the mean of any variance process of the class (see
         :meth:`is_admissible`): use :meth:`driven` when the model must be free of arbitrage.
         """
-        t, values = _steps(times, levels)
-        require(values >= 0.0, values, "levels", "variances, hence non-negative")
-        return cls("market", t, values)
+        return cls("market", np.asarray(times), np.asarray(levels))
 
     @classmethod
     def driven(
@@ -114,28 +154,14 @@ class ForwardVariance:
         Admissible when :math:`\theta(s)\,ds + V_0 L(ds) \ge 0`, L the first-kind resolvent.
         Source: Affine Volterra processes, Ann. Appl. Probab. 29, 2019 (from memory).
         """
-        if not isinstance(kernel, Kernel):
-            raise TypeError(
-                f"kernel must be a FractionalKernel or ConstantKernel, got {type(kernel).__name__}"
-            )
-        start = finite_number(initial_variance, "initial_variance")
-        if start < 0.0:
-            raise ValueError(
-                f"initial_variance must be a variance, hence non-negative, got {start}"
-            )
-        reversion = finite_number(mean_reversion, "mean_reversion")
-        if reversion < 0.0:
-            raise ValueError(f"mean_reversion must be non-negative, got {reversion}")
-        t, values = _steps(times, levels)
-        curve = cls("driven", t, values, kernel, start, reversion)
-        tolerance = 1e-14 * (start + float(np.abs(values).max()))
-        at_times = curve(t)
-        if np.any(at_times < -tolerance):
-            k = int(np.argmax(at_times < -tolerance))
-            raise ValueError(
-                f"levels make the forward variance negative: {at_times[k]:.6g} at time {t[k]:.6g}"
-            )
-        return curve
+        return cls(
+            "driven",
+            np.asarray(times),
+            np.asarray(levels),
+            kernel,
+            initial_variance,
+            mean_reversion,
+        )
 
     def __call__(self, t: ArrayLike) -> NDArray[np.float64]:
         """Forward variance at times ``t`` >= 0 (years): array of the shape of ``t``.
@@ -202,7 +228,7 @@ class ForwardVariance:
     ) -> NDArray[np.float64]:
         """Smallest admissible level of each step: ``-V0 L(times[k])``, and 0 on the last step."""
         floor = np.zeros(times.size)
-        if isinstance(kernel, FractionalKernel) and kernel.hurst < 0.5:
+        if kernel.alpha < 1.0:
             density = times[:-1] ** -kernel.alpha / math.gamma(1.0 - kernel.alpha)
             floor[:-1] = -initial_variance * density
         return floor
@@ -219,6 +245,13 @@ class ForwardVariance:
 
     def __hash__(self) -> int:
         return hash((self.form, self.times.tobytes(), self.levels.tobytes()))
+
+
+def _non_negative(value: object, name: str) -> float:
+    number = finite_number(value, name)
+    if number < 0.0:
+        raise ValueError(f"{name} must be non-negative, got {number}")
+    return number
 
 
 def _steps(times: object, levels: object) -> tuple[NDArray[np.float64], NDArray[np.float64]]:

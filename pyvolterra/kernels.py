@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from ._validation import finite_number
+from ._validation import finite_number, finite_reals, require
 
 
 @dataclass(frozen=True)
@@ -44,10 +44,8 @@ class FractionalKernel:
         return self.hurst + 0.5
 
     def __call__(self, t: ArrayLike) -> NDArray[np.float64]:
-        """Value of the kernel at times ``t`` > 0 (years), any shape; infinite at 0 when rough."""
-        times = np.asarray(t, dtype=float)
-        if np.any(~(times >= 0.0)):
-            raise ValueError("t must be non-negative")
+        """Value at times ``t`` >= 0 (years), any shape; infinite at 0 when rough."""
+        times = _times(t)
         with np.errstate(divide="ignore"):
             return np.asarray(times ** (self.alpha - 1.0) / math.gamma(self.alpha))
 
@@ -67,8 +65,14 @@ class ConstantKernel:
         return 1.0
 
     def __call__(self, t: ArrayLike) -> NDArray[np.float64]:
-        """1 at every time."""
-        return np.ones_like(np.asarray(t, dtype=float))
+        """1 at every time ``t`` >= 0 (years), any shape."""
+        return np.ones_like(_times(t))
+
+
+def _times(t: ArrayLike) -> NDArray[np.float64]:
+    times = finite_reals(t, "t")
+    require(times >= 0.0, times, "t", "non-negative")
+    return times
 
 
 Kernel = FractionalKernel | ConstantKernel

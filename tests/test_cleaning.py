@@ -113,6 +113,39 @@ def test_expiries_too_soon():
     assert gone == dict.fromkeys(quotes.row[first].tolist(), "expires too soon")
 
 
+def test_expiries_that_stand_for_none():
+    quotes = surface(2, days=(30, 366 * 51))
+    last = quotes.expiry == quotes.expiry[-1]
+    gone = dropped(quotes)
+    assert gone == dict.fromkeys(quotes.row[last].tolist(), "expires too far ahead")
+    assert dropped(quotes, max_maturity_years=60.0) == {}
+
+
+@pytest.mark.parametrize("strike", [1e300, 3e5, 15.0, 1e-300])
+def test_strikes_of_another_size(strike):
+    quotes = surface(3)
+    assert np.median(quotes.strike) == pytest.approx(2000.0, rel=0.1)
+    pick = near_the_money(quotes)
+    spoilt = with_changes(quotes, strike=(pick, strike * np.array([1.0, 1.01, 1.02])))
+    assert dropped(spoilt) == dict.fromkeys(quotes.row[pick].tolist(), "absurd strike")
+    with pytest.raises(pv.QuoteError, match=r"absurd strike: .* within a factor 100 of the median"):
+        clean_quotes(spoilt, strict=True)
+    # two quotes whose middle would overflow
+    clean = with_changes(quotes, strike=(np.arange(len(quotes)), 1.7e308)).select(
+        np.arange(len(quotes)) < 2
+    )
+    with pytest.raises(pv.QuoteError, match="none of 2 quotes survives"):
+        clean_quotes(clean)
+
+
+@pytest.mark.parametrize(("bid", "ask"), [(1e6, 1.1e6), (1.5e308, 1.7e308), (0.0, 1e-7)])
+def test_prices_of_another_size(bid, ask):
+    quotes = surface(3)
+    pick = near_the_money(quotes)
+    spoilt = with_changes(quotes, bid=(pick, bid), ask=(pick, ask))
+    assert dropped(spoilt) == dict.fromkeys(quotes.row[pick].tolist(), "absurd price")
+
+
 def duplicated(quotes, source, *, bid=None, ask=None, update=None):
     """Append copies of the quotes at ``source`` with other prices."""
     arrays = {}

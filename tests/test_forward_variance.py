@@ -92,7 +92,7 @@ def test_admissible_floor_is_the_first_kind_resolvent():
         ),
         (
             lambda: pv.ForwardVariance.piecewise_constant([0.5, 1.0], [0.1, -0.1]),
-            r"levels\[1\] must be variances",
+            r"levels\[1\] must be a variance, hence non-negative, got -0.1",
         ),
         (lambda: pv.ForwardVariance.driven(ROUGH, -0.1, [1.0], [0.1]), "initial_variance must"),
         (
@@ -105,6 +105,43 @@ def test_admissible_floor_is_the_first_kind_resolvent():
 def test_bad_values(make, message):
     with pytest.raises(ValueError, match=message):
         make()
+
+
+@pytest.mark.parametrize("hurst", [0.5, math.nextafter(0.5, 0.0)])
+def test_without_a_resolvent_to_lean_on_the_floor_is_zero(hurst):
+    # just below one half hurst + 1/2 rounds to 1, and 1/Gamma(0) = 0
+    floor = pv.ForwardVariance.lowest_drive(pv.FractionalKernel(hurst), 0.04, np.array([0.5, 1.0]))
+    np.testing.assert_array_equal(floor, 0.0)
+
+
+@pytest.mark.parametrize(
+    ("arguments", "message"),
+    [
+        (("free", [1.0], [0.1]), "form must be 'market' or 'driven', got 'free'"),
+        (("market", [1.0], [-0.1]), r"levels\[0\] must be a variance"),
+        (("market", [1.0, 1.0], [0.1, 0.1]), r"times\[1\] must be positive and increasing"),
+        (("market", [1.0], [0.1], ROUGH, 0.1), "initial_variance and .* belong to a driven curve"),
+        (("driven", [1.0], [0.1], ROUGH, -0.1), "initial_variance must be non-negative"),
+        (("driven", [1.0], [0.1], ROUGH, 0.1, math.nan), "mean_reversion must be finite"),
+        (("driven", [1.0], [-1.0], ROUGH, 0.01), "levels make the forward variance negative"),
+    ],
+)
+def test_the_constructor_checks_like_the_builders(arguments, message):
+    with pytest.raises(ValueError, match=message):
+        pv.ForwardVariance(*arguments)
+    with pytest.raises(TypeError, match="kernel must be"):
+        pv.ForwardVariance("driven", np.array([1.0]), np.array([0.1]))
+
+
+def test_the_constructor_leaves_the_callers_arrays_alone():
+    times, levels = np.array([0.5, 1.0]), np.array([0.1, 0.2])
+    curve = pv.ForwardVariance("market", times, levels)
+    levels[0] = 9.0
+    times[0] = 0.1
+    assert curve(0.4) == 0.1
+    assert curve == pv.ForwardVariance.piecewise_constant([0.5, 1.0], [0.1, 0.2])
+    with pytest.raises(ValueError, match="read-only"):
+        curve.levels[0] = 1.0
 
 
 def test_bad_types():

@@ -33,6 +33,11 @@ def test_hurst_of_a_wrong_type(hurst):
         pv.FractionalKernel(hurst)
 
 
-def test_negative_time():
-    with pytest.raises(ValueError, match="t must be non-negative"):
-        pv.FractionalKernel(0.1)([-1.0])
+@pytest.mark.parametrize("kernel", [pv.FractionalKernel(0.1), pv.ConstantKernel()])
+def test_bad_times(kernel):
+    with pytest.raises(ValueError, match=r"t\[1\] must be non-negative, got -1.0"):
+        kernel([0.5, -1.0])
+    with pytest.raises(ValueError, match="t must be finite, got nan"):
+        kernel(math.nan)
+    with pytest.raises(TypeError, match="t must hold real numbers"):
+        kernel("a")
