@@ -3,16 +3,20 @@
 Model prices can mislead: see the cautions in the README before relying on any number.
 """
 
+from importlib import import_module as _import_module
 from typing import TYPE_CHECKING, Any
 
-try:
-    from . import _core as _core
-except ImportError as error:  # a source checkout on the path hides the installed package
+try:  # by its name: `from . import` reports a missing module as a circular import
+    _import_module(f"{__name__}._core")
+except ModuleNotFoundError as error:
+    if error.name != f"{__name__}._core":
+        raise
     raise ImportError(
-        f"the compiled core of pyvolterra could not be loaded from {__path__[0]} ({error}); "
-        "in a source checkout run `pip install .` and start Python from another folder, or build "
-        "in place with `python setup.py build_ext --inplace`"
-    ) from error
+        f"pyvolterra was imported from {__path__[0]}, which has no compiled core for this Python. "
+        "In a source checkout run `pip install .` and start Python from another folder (started "
+        "there, it takes the sources first), or build in place: "
+        "`python setup.py build_ext --inplace`"
+    ) from None
 
 from . import black
 from ._version import __version__

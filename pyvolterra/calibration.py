@@ -33,6 +33,16 @@ SHAPE = ("hurst", "vol_of_vol", "correlation", "mean_reversion")
 LOWER = {"hurst": 0.005, "vol_of_vol": 0.01, "correlation": -0.999, "mean_reversion": 0.0}
 UPPER = {"hurst": 0.5, "vol_of_vol": 5.0, "correlation": 0.999, "mean_reversion": 20.0}
 
+# What the status of scipy's least_squares means.
+MAX_ITERATIONS = 200
+VERDICTS = {
+    0: f"stopped after {MAX_ITERATIONS} iterations, still improving",
+    1: "no direction improves the fit any more",
+    2: "the last step no longer improved the fit",
+    3: "the last step no longer moved the parameters",
+    4: "the last step neither improved the fit nor moved the parameters",
+}
+
 
 def calibrate(
     quotes: Quotes,
@@ -56,8 +66,8 @@ def calibrate(
         ``"fractional"`` fits hurst; a kernel object holds it fixed; ``"constant"`` is the
         classical model.
     mean_reversion : float or None, default 0.0
-        Held at this value; ``None`` fits it (it is nearly confounded with vol_of_vol, and doubles
-        to quadruples the standard errors).
+        Held at this value, in [0, 20]; ``None`` fits it (it is nearly confounded with vol_of_vol,
+        and doubles to quadruples the standard errors).
     strict : bool, default False
         Raise :class:`QuoteError` at the first quote that cleaning would drop.
     progress : callable, optional
@@ -96,8 +106,11 @@ def calibrate(
         raise ValueError(f"kernel must be 'fractional', 'constant' or a kernel, got {kernel!r}")
     if mean_reversion is not None:
         fixed["mean_reversion"] = finite_number(mean_reversion, "mean_reversion")
-        if fixed["mean_reversion"] < 0.0:
-            raise ValueError(f"mean_reversion must be non-negative, got {mean_reversion}")
+        low, high = LOWER["mean_reversion"], UPPER["mean_reversion"]
+        if not low <= fixed["mean_reversion"] <= high:
+            raise ValueError(
+                f"mean_reversion must lie in [{low:g}, {high:g}], got {mean_reversion}"
+            )
 
     say("cleaning quotes")
     cleaned = clean_quotes(quotes, strict=strict)
@@ -127,7 +140,7 @@ def calibrate(
         ftol=1e-10,
         xtol=1e-10,
         gtol=1e-10,
-        max_nfev=200,
+        max_nfev=MAX_ITERATIONS,
     )
     say("estimating errors")
     model = problem.model(solution.x)
@@ -164,7 +177,7 @@ def calibrate(
         quotes_read=len(quotes) + len(quotes.rejections),
         arbitrage=arbitrage,
         converged=bool(solution.status > 0),
-        message=str(solution.message),
+        message=VERDICTS.get(int(solution.status), str(solution.message)),
         evaluations=problem.evaluations,
         elapsed=time.perf_counter() - started,
         fingerprint=_fingerprint(smiles),

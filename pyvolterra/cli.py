@@ -24,6 +24,8 @@ if TYPE_CHECKING:
     from .fit import Fit
 
 OK, BAD_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 130
+MUCH_SET_ASIDE = 0.10  # share of the quotes read
+MOST_REASONS = 6
 DEMO_FOLDER = "pyvolterra-demo"
 DEMO_QUOTES = "demo-quotes.csv"
 
@@ -48,7 +50,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except KeyboardInterrupt:
         print("pyvolterra: interrupted", file=sys.stderr)
         return INTERRUPTED
-    except (ValueError, OSError, ImportError) as error:
+    except OSError as error:
+        print(f"pyvolterra: error: {_one_line(_plain_words(error))}", file=sys.stderr)
+        return BAD_INPUT
+    except (ValueError, ImportError) as error:
         print(f"pyvolterra: error: {_one_line(error)}", file=sys.stderr)
         return BAD_INPUT
 
@@ -66,11 +71,11 @@ def _demo(options: argparse.Namespace) -> int:
 
 def _fit(options: argparse.Namespace) -> int:
     quotes, folder = Path(options.quotes), Path(options.out)
-    _check_before_work(folder)
     if not quotes.exists():
         raise QuoteError(f"quote file {quotes} does not exist")
     if quotes.is_dir():
         raise QuoteError(f"quote file {quotes} is a folder")
+    _check_before_work(folder)
     return _fit_and_report(
         quotes, folder, strict=options.strict, mean_reversion=options.mean_reversion
     )
@@ -116,21 +121,33 @@ def _fit_and_report(
         page = write_report(fit, folder, progress=say)
     print(summary(fit))
     print(f"\nreport  {page}")
+    for text in doubts(fit):
+        print(f"pyvolterra: warning: {_one_line(text)}", file=sys.stderr)
+    return OK if fit.converged else NOT_CONVERGED
+
+
+def doubts(fit: "Fit") -> list[str]:
+    """What a user of this very fit has to know before the numbers, one sentence each."""
+    found = []
     if not fit.converged:
-        print(
-            f"pyvolterra: warning: the fit did not converge ({_one_line(fit.message)}); "
-            "the best point found was written",
-            file=sys.stderr,
+        found.append(f"the fit did not converge ({fit.message}); the best point found was written")
+    if fit.poor:
+        found.append(
+            f"the model does not fit these quotes ({100 * fit.share_inside_bid_ask:.1f} % inside "
+            f"bid-ask, residuals of {fit.rms_half_widths:.1f} half-widths): do not use its numbers"
         )
-        return NOT_CONVERGED
-    return OK
+    if len(fit.rejections) > MUCH_SET_ASIDE * fit.quotes_read:
+        found.append(
+            f"{100 * len(fit.rejections) / fit.quotes_read:.0f} % of the quotes were set aside: "
+            "look at the reasons and at the source of the file first"
+        )
+    return found
 
 
 def summary(fit: "Fit") -> str:
     """Parameters and quality of a fit as a small table of plain text."""
     lines = [
-        f"{fit.quotes_read} quotes read, {fit.residuals.size} fitted, "
-        f"{len(fit.rejections)} set aside",
+        *_used(fit),
         "",
         f"{'parameter':<20}{'estimate':>12}{'std. error':>12}",
     ]
@@ -159,6 +176,27 @@ def summary(fit: "Fit") -> str:
     return "\n".join(lines)
 
 
+def _used(fit: "Fit") -> list[str]:
+    """What became of the quotes: fitted, used for the forwards only, set aside and why."""
+    from .cleaning import cleaning_table
+
+    lines = [f"{fit.quotes_read} quotes read", f"{fit.residuals.size:>7} fitted"]
+    rest = fit.quotes_read - fit.residuals.size - len(fit.rejections)
+    if rest > 0:
+        lines.append(
+            f"{rest:>7} mostly in the money, not fitted: they served put-call parity, which gives "
+            "the forwards"
+        )
+    lines.append(f"{len(fit.rejections):>7} set aside")
+    table = sorted(cleaning_table(fit.rejections), key=lambda entry: -entry[2])
+    shown = table[:MOST_REASONS] if len(table) > MOST_REASONS + 1 else table
+    lines += [f"{count:>11} {reason} (rows {rows})" for _, reason, count, rows in shown]
+    if len(shown) < len(table):
+        other = sum(entry[2] for entry in table[len(shown) :])
+        lines.append(f"{other:>11} for {len(table) - len(shown)} other reasons, see the report")
+    return lines
+
+
 class _Parser(argparse.ArgumentParser):
     """A parser whose errors are one line, like all others."""
 
@@ -178,16 +216,21 @@ def _parser() -> argparse.ArgumentParser:
     commands = parser.add_subparsers(title="commands", required=True, metavar="COMMAND")
 
     demo = commands.add_parser("demo", help="write an invented quote file and fit it")
-    demo.add_argument("--out", metavar="DIR", default=DEMO_FOLDER, help="default: %(default)s")
+    demo.add_argument(
+        "--out", metavar="DIR", type=_path, default=DEMO_FOLDER, help="default: %(default)s"
+    )
     demo.set_defaults(command=_demo)
 
     fit = commands.add_parser("fit", help="fit a file of option quotes")
     fit.add_argument(
         "quotes",
         metavar="QUOTES",
+        type=_path,
         help="CSV or Parquet: quote_time, expiry, strike, option_type, bid, ask",
     )
-    fit.add_argument("--out", metavar="DIR", required=True, help="folder for the results")
+    fit.add_argument(
+        "--out", metavar="DIR", type=_path, required=True, help="folder for the results"
+    )
     fit.add_argument(
         "--strict", action="store_true", help="stop at the first bad row, set none aside"
     )
@@ -196,7 +239,7 @@ def _parser() -> argparse.ArgumentParser:
         metavar="VALUE|fit",
         type=_mean_reversion,
         default=0.0,
-        help="hold it at VALUE (default 0), or fit it",
+        help="hold it at VALUE from 0 to 20 (default 0), or fit it",
     )
     fit.set_defaults(command=_fit)
 
@@ -205,15 +248,26 @@ def _parser() -> argparse.ArgumentParser:
     return parser
 
 
+def _path(text: str) -> str:
+    if not text.strip():
+        raise argparse.ArgumentTypeError("is empty, must be a path")
+    return text
+
+
 def _mean_reversion(text: str) -> float | None:
+    from .calibration import LOWER, UPPER
+
+    low, high = LOWER["mean_reversion"], UPPER["mean_reversion"]
     if text.strip().lower() == "fit":
         return None
     try:
         value = float(text)
     except ValueError:
         value = math.nan
-    if not (math.isfinite(value) and value >= 0.0):
-        raise argparse.ArgumentTypeError(f"must be 'fit' or a number of at least 0, got {text!r}")
+    if not low <= value <= high:
+        raise argparse.ArgumentTypeError(
+            f"must be 'fit' or a number from {low:g} to {high:g}, got {text!r}"
+        )
     return value
 
 
@@ -256,6 +310,18 @@ def _plain_line(stream: TextIO) -> Iterator[Callable[[str], None]]:
     finally:
         stream.write("\r" + " " * length + "\r")
         stream.flush()
+
+
+def _plain_words(error: OSError) -> str:
+    # The system's words without its number: "cannot use 'a/b.csv': permission denied".
+    if error.strerror is None or error.errno is None:
+        return str(error)
+    words = error.strerror[:1].lower() + error.strerror[1:]
+    if error.filename is None:
+        return words
+    name = str(error.filename)
+    shown = name if len(name) <= 80 else f"{name[:40]}…{name[-39:]}"
+    return f"cannot use {shown!r}: {words}"
 
 
 def _one_line(message: object) -> str:

@@ -11,6 +11,10 @@ from .model import VolterraHeston
 from .parity import ForwardCurve
 from .smile_quotes import SmileQuotes
 
+# Below this share within bid and ask, or above this many half-widths of residual, the model does
+# not describe the quotes: common practice, no source.
+MIN_SHARE_INSIDE, MAX_RMS_HALF_WIDTHS = 0.5, 3.0
+
 
 @dataclass(frozen=True)
 class Fit:
@@ -95,3 +99,18 @@ class Fit:
     def rms_residual(self) -> float:
         """Root mean square of the residuals, in volatility."""
         return float(np.sqrt(np.mean(self.residuals**2)))
+
+    @property
+    def rms_half_widths(self) -> float:
+        """Root mean square of the residuals, each in half-widths of its quote."""
+        return float(np.sqrt(np.mean((self.weights * self.residuals) ** 2)))
+
+    @property
+    def poor(self) -> bool:
+        """Whether fewer than half of the quotes hold the model within bid and ask, or the residuals
+        are larger than three half-widths: then the parameters describe something else.
+        """
+        return (
+            self.share_inside_bid_ask < MIN_SHARE_INSIDE
+            or not self.rms_half_widths <= MAX_RMS_HALF_WIDTHS
+        )

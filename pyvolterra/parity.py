@@ -38,6 +38,8 @@ RATE_PRIOR = np.array([0.10, 0.03, 0.02, 0.005])
 RATE_MISFIT = 1e-4
 # A larger zero rate, of either sign, means that calls and puts are not what they are said to be.
 MAX_RATE = 1.0
+# Nothing is quoted more finely: half-width over strike, and error of a discount factor.
+MIN_RELATIVE_WIDTH, MIN_DISCOUNT_ERROR = 1e-12, 1e-9
 # Uncertainty of an interpolated carry per year: common practice, no source.
 CARRY_ERROR = 0.005
 
@@ -261,7 +263,8 @@ def _pair_up(quotes: Quotes, expiry: np.datetime64) -> _Line:
     if strike.size:
         # No pair counts as more than ten times sharper than the median; a locked one has no width.
         floor = 0.1 * np.median(half_width)
-        half_width = np.maximum(half_width, floor if floor > 0.0 else 1e-6 * strike)
+        lowest = MIN_RELATIVE_WIDTH if floor > 0.0 else 1e-6
+        half_width = np.maximum(half_width, np.maximum(floor, lowest * strike))
         # A straddle at the forward costs 0.8 standard deviations of the price.
         forward = _rough_forward(strike, difference)
         nearest = int(np.argmin(np.abs(strike - forward)))
@@ -326,21 +329,23 @@ def _rate_curve(
     x = maturity[:, None] / RATE_SCALES
     smooth = np.column_stack([np.ones(maturity.size), -np.expm1(-x) / x])
     basis = np.column_stack([smooth, np.eye(maturity.size)])
-    prior = np.diag(np.concatenate([RATE_PRIOR, np.full(maturity.size, RATE_MISFIT)]) ** -2.0)
+    prior = np.diag(1.0 / np.concatenate([RATE_PRIOR, np.full(maturity.size, RATE_MISFIT)]))
     coefficients = np.zeros(basis.shape[1])
+    error = np.maximum(error, MIN_DISCOUNT_ERROR)
     for _ in range(50):
         model = np.exp(-maturity * (basis @ coefficients))
         residual = np.where(np.isfinite(error), discount - model, 0.0)
         jacobian = -(maturity * model)[:, None] * basis
         # An expiry more than three errors off the curve has less and less say.
         trust = 1.0 / np.maximum(np.abs(residual) / (3.0 * error), 1.0)
-        weight = trust / error**2
-        hessian = jacobian.T @ (weight[:, None] * jacobian) + prior
-        step = np.linalg.solve(hessian, jacobian.T @ (weight * residual) - prior @ coefficients)
+        weight = np.sqrt(trust) / error
+        # By orthogonal factors: data and prior may differ by a factor 1e10.
+        q, r = np.linalg.qr(np.concatenate([weight[:, None] * jacobian, prior]))
+        step = np.linalg.solve(r, q.T @ np.append(weight * residual, -prior @ coefficients))
         coefficients += step
         if np.abs(step).max() < 1e-13:
             break
-    errors: FloatArray = np.sqrt(np.einsum("ij,ji->i", basis, np.linalg.solve(hessian, basis.T)))
+    errors: FloatArray = np.linalg.norm(np.linalg.solve(r.T, basis.T), axis=0)
     return basis @ coefficients, errors
 
 

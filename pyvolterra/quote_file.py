@@ -4,6 +4,7 @@ import csv
 import difflib
 import io
 from collections.abc import Iterator, Sequence
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -44,12 +45,22 @@ def _columns(found: Sequence[str], source: str, hint: str = "") -> dict[str, int
         words = []
         for name in missing:
             close = difflib.get_close_matches(name, others, n=1, cutoff=0.6)
-            words.append(f"{name} (is it {others[close[0]]!r}?)" if close else name)
+            words.append(f"{name} (is it {clipped(others[close[0]])!r}?)" if close else name)
         raise QuoteError(
             f"{source}: missing column{'s' if len(missing) > 1 else ''} {', '.join(words)}; "
-            f"found: {', '.join(found)}{hint}"
+            f"found: {_listed(found)}{hint}"
         )
     return {n: found.index(n) for n in (*COLUMNS, *OPTIONAL_COLUMNS) if n in found}
+
+
+def clipped(text: str, length: int = 40) -> str:
+    """At most ``length`` characters of a text that goes into a message."""
+    return text if len(text) <= length else text[: length - 1] + "…"
+
+
+def _listed(names: Sequence[str], most: int = 10) -> str:
+    more = f", … ({len(names) - most} more)" if len(names) > most else ""
+    return ", ".join(map(clipped, names[:most])) + more
 
 
 def csv_rows(content: bytes, source: str) -> Iterator[tuple[int, Cells]]:
@@ -112,13 +123,31 @@ def parquet_rows(content: bytes, source: str) -> Iterator[tuple[int, Cells]]:
         table = file.read(columns=list(names))
     except (arrow.ArrowException, OSError) as error:
         raise QuoteError(f"{source}: not a readable Parquet file ({error})") from None
-    lists = {}
-    for name in names:
-        column = table.column(name)
-        if arrow.types.is_timestamp(column.type):  # to UTC; Python times end at microseconds
-            column = column.cast(arrow.timestamp("us"), safe=False)
-        lists[name] = column.to_pylist()
+    lists = {name: _python_values(table.column(name), arrow) for name in names}
     return (
         (number, dict(zip(lists, values, strict=True)))
         for number, values in enumerate(zip(*lists.values(), strict=True), start=2)
     )
+
+
+def _python_values(column: Any, arrow: Any) -> list[Any]:
+    # A value that Python cannot hold, such as a time in the year 32,000, becomes its text, so that
+    # it costs its own row only.
+    if arrow.types.is_timestamp(column.type):
+        # To UTC, then to microseconds as Python has: nanoseconds are cut, seconds may overflow.
+        unit = column.type.unit
+        column = column.cast(arrow.timestamp(unit))
+        with suppress(arrow.ArrowInvalid):
+            column = column.cast(arrow.timestamp("us"), safe=unit != "ns")
+    try:
+        values: list[Any] = column.to_pylist()
+    except (OverflowError, ValueError):
+        values = [_python_value(cell) for cell in column]
+    return values
+
+
+def _python_value(cell: Any) -> Any:
+    try:
+        return cell.as_py()
+    except (OverflowError, ValueError) as error:
+        return f"{getattr(cell, 'value', '?')} of type {cell.type} ({error})"

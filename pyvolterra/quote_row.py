@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from datetime import UTC, date, datetime, time
 from typing import Any
 
-from .quote_file import Cells
+from .quote_file import Cells, clipped
 
 SIDES = {"c": True, "call": True, "p": False, "put": False}
 # A date without a time of day means this time, in UTC.
@@ -88,7 +88,7 @@ class RowParser:
         if moment is None:
             raise BadRowError(
                 "not a time",
-                f"{column} is {value!r}, must be an ISO 8601 date or time such as "
+                f"{column} is {_shown(value)}, must be an ISO 8601 date or time such as "
                 "2031-05-13T15:30:00Z",
             )
         self.times[value] = moment
@@ -128,22 +128,29 @@ def _number(column: str, value: Any) -> float:
     except (TypeError, ValueError, OverflowError):
         if _is_blank(value):
             raise BadRowError("empty cell", f"{column} is empty, must be a number") from None
-        raise BadRowError("not a number", f"{column} is {value!r}, must be a number") from None
+        raise BadRowError(
+            "not a number", f"{column} is {_shown(value)}, must be a number"
+        ) from None
     # Python reads 1_000 as 1000 and True as 1; no file means that.
     if isinstance(value, bool) or (isinstance(value, str) and "_" in value):
-        raise BadRowError("not a number", f"{column} is {value!r}, must be a number")
+        raise BadRowError("not a number", f"{column} is {_shown(value)}, must be a number")
     if not math.isfinite(number):
-        raise BadRowError("not finite", f"{column} is {value!r}, must be a finite number")
+        raise BadRowError("not finite", f"{column} is {_shown(value)}, must be a finite number")
     if number < 0.0:
-        raise BadRowError("negative", f"{column} is {value}, must not be negative")
+        raise BadRowError("negative", f"{column} is {clipped(str(value))}, must not be negative")
     return number
+
+
+def _shown(value: Any) -> str:
+    return clipped(repr(value), 120)
 
 
 def _side(value: Any) -> bool:
     is_call = SIDES.get(str(value).strip().lower())
     if is_call is None:
         raise BadRowError(
-            "unknown option type", f"option_type is {value!r}, must be one of C, P, call, put"
+            "unknown option type",
+            f"option_type is {_shown(value)}, must be one of C, P, call, put",
         )
     return is_call
 

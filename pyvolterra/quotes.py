@@ -202,6 +202,8 @@ def read_quotes(path: str | os.PathLike[str], *, strict: bool = False) -> Quotes
         bad.
     FileNotFoundError, IsADirectoryError
         There is no such file, or it is a directory.
+    TypeError, ValueError
+        ``path`` is not a string or path, or empty.
     MissingDependencyError
         A Parquet file, and pyarrow is not installed.
 
@@ -210,7 +212,11 @@ def read_quotes(path: str | os.PathLike[str], *, strict: bool = False) -> Quotes
     About 1 s for 100,000 rows. Rows with another quote time than the majority's are set
     aside. Thread-safe.
     """
-    file = Path(os.fspath(path))
+    if not isinstance(path, (str, os.PathLike)):
+        raise TypeError(f"path must be a string or a path, got {type(path).__name__}")
+    if not os.fspath(path):
+        raise ValueError("path is empty, must name a CSV or Parquet file of quotes")
+    file = Path(path)
     parser = RowParser()
     parsed: list[Row] = []
     rejections: list[Rejection] = []

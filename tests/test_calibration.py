@@ -1,11 +1,15 @@
 """The fit: recovers what the demo quotes were made with, and says what it did."""
 
+import warnings
+from dataclasses import replace
+
 import numpy as np
 import pytest
+from invented_quotes import surface, with_changes
 from scipy.stats import chi2
 
 import pyvolterra as pv
-from pyvolterra import demo
+from pyvolterra import calibration, demo
 
 
 @pytest.fixture(scope="module")
@@ -43,6 +47,25 @@ def test_recovers_the_parameters_of_the_demo(fit):
     assert fit.standard_errors["hurst"] < 0.02
     assert fit.standard_errors["vol_of_vol"] < 0.05
     assert fit.standard_errors["correlation"] < 0.05
+
+
+def test_verdict_is_in_plain_words(fit):
+    assert fit.message in calibration.VERDICTS.values()
+    assert "`" not in fit.message
+
+
+def test_a_model_that_cannot_fit_is_called_poor(quotes, fit):
+    assert not fit.poor
+    assert fit.rms_half_widths < 1.0
+    smooth = pv.calibrate(quotes, kernel="constant", mean_reversion=20.0)
+    assert smooth.rms_half_widths > fit.rms_half_widths
+    # either criterion is enough
+    wide = replace(fit, weights=20.0 * fit.weights)
+    assert wide.share_inside_bid_ask > 0.95
+    assert wide.poor
+    s = fit.smiles
+    narrow = replace(s, ask_volatility=s.mid_volatility, bid_volatility=s.mid_volatility)
+    assert replace(fit, smiles=narrow).poor
 
 
 def test_fits_inside_the_quotes(fit):
@@ -96,8 +119,9 @@ def test_bad_arguments(quotes):
         pv.calibrate("quotes.csv")
     with pytest.raises(ValueError, match="kernel must be"):
         pv.calibrate(quotes, kernel="smooth")
-    with pytest.raises(ValueError, match="mean_reversion must be non-negative"):
-        pv.calibrate(quotes, mean_reversion=-1.0)
+    for value in (-1.0, 20.5):
+        with pytest.raises(ValueError, match=r"mean_reversion must lie in \[0, 20\], got"):
+            pv.calibrate(quotes, mean_reversion=value)
 
 
 def test_too_few_quotes(quotes):
@@ -105,3 +129,24 @@ def test_too_few_quotes(quotes):
     few = one.select(np.arange(len(one)) % 8 == 0)
     with pytest.raises(pv.QuoteError):
         pv.calibrate(few)
+
+
+def test_absurd_numbers_warn_of_nothing_and_move_nothing():
+    # one of each: strikes, prices and widths that overflow or vanish when squared
+    quotes = surface(3, days=(25, 120))
+    pick = np.flatnonzero(quotes.is_call)[[3, 9, 15, 40, 45, 50]]
+    spoilt = with_changes(
+        quotes,
+        strike=(pick[:2], [1e300, 1e-300]),
+        bid=(pick[2:5], [1.6e308, 1e-300, 1e-300]),
+        ask=(pick[2:5], [1.7e308, 1.2e-300, 1.7e308]),
+    )
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        warnings.simplefilter("ignore", pv.AccuracyWarning)
+        fit = pv.calibrate(spoilt)
+    reasons = 2 * ["absurd strike"] + 3 * ["absurd price"]
+    gone = {r.row: r.reason for r in fit.rejections}
+    assert gone == dict(zip(quotes.row[pick[:5]].tolist(), reasons, strict=True))
+    clean = pv.calibrate(quotes.select(~np.isin(np.arange(len(quotes)), pick[:5])))
+    assert fit.parameters == clean.parameters

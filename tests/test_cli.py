@@ -1,7 +1,9 @@
 """The commands: what they write, print and return, and that bad input costs one clear line."""
 
+import errno
 import io
 import json
+import os
 import signal
 import subprocess
 import sys
@@ -123,6 +125,47 @@ def test_not_converged_is_written_and_said(quotes, ready_fit, tmp_path, monkeypa
     assert document["converged"] is False
 
 
+def test_a_poor_fit_is_called_one_in_one_line(quotes, ready_fit, tmp_path, monkeypatch, capsys):
+    off = ready_fit.residuals + 4.0 / ready_fit.weights
+    poor = replace(ready_fit, residuals=off, model_volatility=ready_fit.smiles.mid_volatility + off)
+    monkeypatch.setattr(calibration, "calibrate", lambda *a, **k: poor)
+    assert cli.main(["fit", str(quotes), "--out", str(tmp_path / "out")]) == 0
+    (line,) = capsys.readouterr().err.splitlines()
+    assert line.startswith("pyvolterra: warning: the model does not fit these quotes (0.0 % inside")
+    assert "half-widths" in line
+    page = (tmp_path / "out" / "report.html").read_text(encoding="utf-8")
+    assert "The model does not fit these quotes" in page
+
+
+def test_every_quote_read_is_accounted_for(small_fit):
+    lines = cli.summary(small_fit).splitlines()
+    head = lines[: lines.index("")]
+    assert head[0] == f"{small_fit.quotes_read} quotes read"
+    count = {line.split(maxsplit=1)[1]: int(line.split()[0]) for line in head}
+    twins = next(n for words, n in count.items() if words.startswith("mostly in the money"))
+    assert count["fitted"] + twins + count["set aside"] == small_fit.quotes_read
+    reasons = head[head.index(f"{len(small_fit.rejections):>7} set aside") + 1 :]
+    assert sum(int(line.split()[0]) for line in reasons) == len(small_fit.rejections)
+    assert "(rows " in reasons[0]
+
+
+def test_rare_reasons_are_summed_up(small_fit):
+    some = small_fit.rejections[0]
+    many = tuple(replace(some, reason=f"reason {i}") for i in range(12) for _ in range(20 - i))
+    shown = cli.summary(replace(small_fit, rejections=many))
+    assert "20 reason 0 (rows" in shown
+    assert "15 reason 5 (rows" in shown
+    assert "69 for 6 other reasons, see the report" in shown
+
+
+def test_much_set_aside_is_a_warning(small_fit):
+    some = small_fit.rejections[0]
+    tenth = small_fit.quotes_read // 10
+    assert cli.doubts(replace(small_fit, rejections=tenth * (some,))) == []
+    (text,) = cli.doubts(replace(small_fit, rejections=(tenth + 1) * (some,)))
+    assert text.startswith("11 % of the quotes were set aside")
+
+
 # ---------------------------------------------------------------- bad input
 
 
@@ -182,9 +225,13 @@ def test_bad_paths(quotes, tmp_path, monkeypatch, capsys):
         ([], "COMMAND"),
         (["fit"], "QUOTES"),
         (["fit", "q.csv"], "--out"),
-        (["fit", "q.csv", "--out", "x", "--mean-reversion", "-1"], "at least 0"),
-        (["fit", "q.csv", "--out", "x", "--mean-reversion", "nan"], "at least 0"),
+        (["fit", "q.csv", "--out", "x", "--mean-reversion", "-1"], "from 0 to 20"),
+        (["fit", "q.csv", "--out", "x", "--mean-reversion", "nan"], "from 0 to 20"),
+        (["fit", "q.csv", "--out", "x", "--mean-reversion", "20.5"], "from 0 to 20"),
         (["fit", "q.csv", "--out", "x", "--mean-reversion", "much"], "'much'"),
+        (["fit", "", "--out", "x"], "QUOTES: is empty"),
+        (["fit", "q.csv", "--out", " "], "--out: is empty"),
+        (["demo", "--out", ""], "--out: is empty"),
         (["guess"], "guess"),
     ],
 )
@@ -192,6 +239,29 @@ def test_bad_words(capsys, words, naming):
     with pytest.raises(SystemExit) as stopped:
         cli.main(words)
     fails_in_one_line(stopped.value.code, capsys.readouterr().err, naming=naming)
+
+
+@pytest.mark.parametrize("code", [errno.EACCES, errno.ENOSPC, errno.EIO])
+def test_errors_of_the_system_are_words_without_numbers(
+    quotes, ready_fit, tmp_path, monkeypatch, capsys, code
+):
+    def fail(*arguments, **more):
+        raise OSError(code, os.strerror(code), "folder/" + 200 * "long" + "/quotes.csv")
+
+    monkeypatch.setattr("pyvolterra.quotes.read_quotes", fail)
+    status = cli.main(["fit", str(quotes), "--out", str(tmp_path / "out")])
+    err = capsys.readouterr().err
+    words = os.strerror(code)
+    fails_in_one_line(status, err, naming=f"quotes.csv': {words[0].lower()}{words[1:]}")
+    assert "Errno" not in err
+    assert len(err) < 200
+
+
+def test_a_name_too_long_for_the_system(tmp_path, capsys):
+    status = cli.main(["fit", 300 * "a" + ".csv", "--out", str(tmp_path / "out")])
+    err = capsys.readouterr().err
+    fails_in_one_line(status, err, naming="file name too long")
+    assert "Errno" not in err
 
 
 @pytest.mark.parametrize("command", ["fit", "demo"])

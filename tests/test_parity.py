@@ -1,5 +1,6 @@
 """Forwards and discount factors recovered from quotes whose forwards and discounts are known."""
 
+import warnings
 from dataclasses import replace
 
 import numpy as np
@@ -185,3 +186,21 @@ def test_interpolation():
             curve.forward(bad)
     with pytest.raises(TypeError, match="maturity"):
         curve.discount("soon")
+
+
+@pytest.mark.parametrize("width", [1e-7, 1e-12])
+def test_hardly_any_width_at_long_maturities(width):
+    # The data outweigh the prior of the rates by twenty orders of magnitude.
+    quotes = surface(1, days=(5000,), noise=0.0, width=width, strikes=9)
+    (point,) = infer_forwards(quotes).points
+    assert point.forward == pytest.approx(forward(point.maturity), rel=1e-6)
+    assert point.discount == pytest.approx(discount(point.maturity), rel=1e-6)
+
+
+def test_widths_that_vanish_when_squared():
+    quotes = surface(1, days=(60,), noise=0.0)
+    tiny = replace(quotes, bid=quotes.mid * (1.0 - 1e-16), ask=quotes.mid)
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        (point,) = infer_forwards(tiny).points
+    assert point.forward == pytest.approx(forward(point.maturity), rel=1e-6)

@@ -157,6 +157,16 @@ def test_columns_are_always_fatal(tmp_path, header, words):
         read_quotes(write(tmp_path, header, GOOD))
 
 
+def test_long_texts_are_cut_in_messages(tmp_path):
+    header = ",".join(f"column_{k}_{50 * 'x'}" for k in range(300))
+    with pytest.raises(pv.QuoteError, match=r"found: column_0_x.*… \(290 more\)$") as refused:
+        read_quotes(write(tmp_path, header, "1"))
+    assert len(str(refused.value)) < 700
+    with pytest.raises(pv.QuoteError, match="strike is 'x") as refused:
+        read_quotes(write(tmp_path, HEADER, GOOD.replace("100", 10_000 * "x")), strict=True)
+    assert len(str(refused.value)) < 250
+
+
 def test_nothing_to_read(tmp_path):
     for content in (b"", b" \n\n", b"\xef\xbb\xbf"):
         path = tmp_path / "empty.csv"
@@ -172,8 +182,10 @@ def test_nothing_to_read(tmp_path):
         read_quotes(tmp_path / "missing.csv")
     with pytest.raises(IsADirectoryError, match="is a directory"):
         read_quotes(tmp_path)
-    with pytest.raises(TypeError):
+    with pytest.raises(TypeError, match="path must be a string or a path, got NoneType"):
         read_quotes(None)
+    with pytest.raises(ValueError, match="path is empty"):
+        read_quotes("")
 
 
 def test_not_text(tmp_path):
@@ -259,6 +271,36 @@ class TestParquet:
         assert quotes.expiry[0] == np.datetime64("2031-06-20T16:00:00")
         with pytest.raises(pv.QuoteError, match="row 3: bid is nan"):
             read_quotes(path, strict=True)
+
+    @pytest.mark.parametrize(
+        ("kind", "day", "huge"),
+        [
+            (arrow.timestamp("s"), 86_400, 2**62 // 1000),  # times 10**6 wraps round to 1969
+            (arrow.timestamp("ms", "Mars/Phobos"), 86_400_000, 2**62),
+            (arrow.timestamp("us"), 86_400_000_000, 2**62),
+            (arrow.timestamp("us", "UTC"), 86_400_000_000, -(2**62)),
+            (arrow.date32(), 1, 2**31 - 1),
+            (arrow.date64(), 86_400_000, 86_400_000 * 10**9),
+        ],
+    )
+    def test_a_time_out_of_range_costs_its_own_row(self, tmp_path, kind, day, huge):
+        columns = {
+            "quote_time": [datetime(2031, 5, 13, 15, 30, tzinfo=UTC)] * 3,
+            "expiry": arrow.array([22_450 * day, huge, 22_451 * day], kind),  # June 2031 but one
+            "strike": [90.0, 100.0, 110.0],
+            "option_type": ["C"] * 3,
+            "bid": [1.0] * 3,
+            "ask": [2.0] * 3,
+        }
+        quotes = read_quotes(self.save(tmp_path / "q.parquet", columns))
+        assert [(r.row, r.reason) for r in quotes.rejections] == [(3, "not a time")]
+        np.testing.assert_array_equal(quotes.row, [2, 4])
+        assert np.all((quotes.maturity > 0.1) & (quotes.maturity < 0.2))
+        with pytest.raises(pv.QuoteError, match=r"q\.parquet, row 3: expiry is '-?\d+ of type "):
+            read_quotes(tmp_path / "q.parquet", strict=True)
+        columns["expiry"] = arrow.array([huge] * 3, kind)
+        with pytest.raises(pv.QuoteError, match=r"none of the 3 rows is usable.*: expiry is "):
+            read_quotes(self.save(tmp_path / "q.parquet", columns))
 
     def test_text_columns_and_any_suffix(self, tmp_path):
         lines = [GOOD, GOOD.replace("100", "101"), GOOD.replace("1.5", "?")]

@@ -152,6 +152,11 @@ def _flags(fit: Fit, slices: Sequence[ExpirySlice]) -> str:
             f"The optimiser stopped before converging ({text(fit.message)}): these are the best "
             "values it saw, their standard errors mean little."
         )
+    if fit.poor:
+        flags.append(
+            f"The model does not fit these quotes: {100.0 * fit.share_inside_bid_ask:.1f} % inside "
+            f"bid–ask, residuals of {fit.rms_half_widths:.1f} half-widths. Do not use its numbers."
+        )
     if fit.at_bound:
         flags.append(
             f"At a bound: {text(', '.join(fit.at_bound))}. The quotes ask for more than the model "
