@@ -14,6 +14,7 @@ from .canvas import (
     MODEL,
     MUTED,
     QUOTE,
+    WIDTH,
     bars,
     cap_width,
     heading,
@@ -38,9 +39,10 @@ def smile_picture(fit_slice: ExpirySlice) -> bytes:
     from matplotlib.ticker import MaxNLocator
 
     s = fit_slice
-    figure = new_figure(5.8, 4.7)
+    height = 3.9
+    figure = new_figure(WIDTH, height)
     grid = figure.add_gridspec(
-        2, 1, height_ratios=(3.4, 1.0), hspace=0.08, left=0.122, right=0.975, top=0.815, bottom=0.11
+        2, 1, height_ratios=(3.0, 1.0), hspace=0.08, left=0.155, right=0.975, top=0.79, bottom=0.125
     )
     top, below = figure.add_subplot(grid[0]), figure.add_subplot(grid[1])
     x = 100.0 * s.log_moneyness
@@ -50,8 +52,9 @@ def smile_picture(fit_slice: ExpirySlice) -> bytes:
     top.axvline(0.0, color=MUTED, lw=0.8, ls=(0, (2, 3)), zorder=1)
     top.set_ylabel("implied volatility (%)")
     top.yaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 5, 10]))
+    top.xaxis.set_major_locator(MaxNLocator(7, steps=[1, 2, 5, 10]))
     top.tick_params(labelbottom=False)
-    legend(figure, smile_key(not s.inside.all()), 0.67, 4.7 - 0.73)
+    legend(figure, smile_key(not s.inside.all()), 0.12, height - 0.65)
 
     residual_axes(below)
     shown = np.clip(s.half_widths, -2.7, 2.7)
@@ -64,24 +67,25 @@ def smile_picture(fit_slice: ExpirySlice) -> bytes:
         ("v", s.half_widths < -2.7),
     ):
         below.scatter(x[at], shown[at], s=11.0, marker=marker, c=colour[at], lw=0, zorder=3)
+    below.xaxis.set_major_locator(MaxNLocator(7, steps=[1, 2, 5, 10]))
     below.set_xlabel("log-moneyness ln(K/F) (%)")
-    below.set_ylabel("model − mid\n(half-widths)", fontsize=8.5)
+    below.set_ylabel("model − mid\n(half-widths)", fontsize=8)
     for axes in (top, below):
         axes.set_xlim(padded(np.append(x, 0.0), 0.03))
     figure.align_ylabels([top, below])
-    figure.text(0.02, 0.944, s.label, fontsize=13, fontweight="bold", color=INK)
+    heading(figure, height, s.label)
     right_text(
         figure,
-        0.944,
+        1.0 - 0.26 / height,
         f"{s.days:.1f} days" if s.days < 2.0 else f"{s.days:,.0f} days",
         f"forward {s.forward:,.{price_decimals(s.forward)}f}",
     )
     figure.text(
         0.02,
-        0.892,
+        1.0 - 0.47 / height,
         f"{len(s)} quotes · rms {1e4 * s.rms:.0f} bp of volatility · "
         f"{100.0 * s.share_inside:.0f} % inside bid–ask",
-        fontsize=9.5,
+        fontsize=9,
         color=MUTED,
     )
     return png(figure)
@@ -91,7 +95,7 @@ def smiles_picture(slices: tuple[ExpirySlice, ...], *, columns: int = 4) -> byte
     """All smiles as small multiples on common axes, in at-the-money standard deviations."""
     columns = min(columns, len(slices))
     rows = math.ceil(len(slices) / columns)
-    width = 2.55 * columns + 0.6 if columns > 2 else 4.6
+    width = 2.55 * columns + 0.6 if columns > 2 else WIDTH
     figure = new_figure(width, 1.95 * rows + 0.88)
     height = figure.get_figheight()
     grid = figure.add_gridspec(
@@ -144,14 +148,14 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     from matplotlib.lines import Line2D
 
     count = len(slices)
-    height = 1.75 + 0.26 * max(count, 3)
-    figure = new_figure(6.2, height)
+    height = 1.75 + 0.21 * max(count, 3)
+    figure = new_figure(WIDTH, height)
     grid = figure.add_gridspec(
         1,
         2,
-        width_ratios=(4.2, 1.0),
+        width_ratios=(4.0, 1.0),
         wspace=0.05,
-        left=0.165,
+        left=0.19,
         right=0.965,
         bottom=0.52 / height,
         top=1.0 - 1.10 / height,
@@ -165,7 +169,7 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     for i, s in enumerate(slices):
         z = s.standardise(s.log_moneyness)
         outside = ~s.inside
-        for mask, size, edge, line in ((~outside, 22.0, "#9aa4ae", 0.4), (outside, 34.0, INK, 1.1)):
+        for mask, size, edge, line in ((~outside, 15.0, "#9aa4ae", 0.4), (outside, 26.0, INK, 1.1)):
             axes.scatter(
                 z[mask],
                 np.full(int(mask.sum()), i),
@@ -193,15 +197,15 @@ def bid_ask_picture(slices: tuple[ExpirySlice, ...]) -> bytes:
     for panel in (axes, bars):
         panel.set_ylim(max(count, 3) - 0.5, -0.5)
     heading(figure, height, "Model against bid and ask")
-    figure.text(0.02, 1.0 - 0.665 / height, "model at", va="center", fontsize=9, color=INK)
-    strip = figure.add_axes((0.165, 1.0 - 0.72 / height, 0.26, 0.11 / height))
+    figure.text(0.02, 1.0 - 0.575 / height, "model at", va="center", fontsize=9, color=INK)
+    strip = figure.add_axes((0.19, 1.0 - 0.63 / height, 0.26, 0.11 / height))
     strip.imshow(np.linspace(-2.0, 2.0, 256)[None, :], aspect="auto", cmap=palette)
     strip.set_yticks([])
     strip.set_xticks(np.array([0.25, 0.5, 0.75]) * 255, ["bid", "mid", "ask"])
     strip.tick_params(length=0, pad=1.5, labelsize=8.5)
     strip.spines[:].set_visible(False)
     ring = Line2D([], [], marker="o", ls="", mfc="white", mec=INK, mew=1.1, ms=5.8)
-    legend(figure, [(ring, "model outside bid–ask")], 2.85, height - 0.665)
+    legend(figure, [(ring, "model outside bid–ask")], 2.15, height - 0.575)
     return png(figure)
 
 
@@ -250,7 +254,7 @@ def skew_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> bytes:
     name = "−∂σ/∂ ln K" if falling else "|∂σ/∂ ln K|"
     axes.set_ylabel(f"{name} at the forward\n(volatility points per 1 % of ln K)", fontsize=9)
     heading(figure, figure.get_figheight(), "At-the-money skew")
-    legend(figure, key, 0.78, figure.get_figheight() - 0.53)
+    legend(figure, key, 0.12, figure.get_figheight() - 0.47)
     return png(figure)
 
 
@@ -283,5 +287,5 @@ def forward_volatility_picture(fit: Fit, slices: tuple[ExpirySlice, ...]) -> byt
         (mean, "average to t"),
         (expiries, "expiries"),
     ]
-    legend(figure, key, 0.78, figure.get_figheight() - 0.53)
+    legend(figure, key, 0.12, figure.get_figheight() - 0.47)
     return png(figure)

@@ -28,17 +28,30 @@ def table(
     wrapped: Iterable[int] = (),
     head: bool = True,
 ) -> str:
-    """A table; columns numbered in `numeric` are aligned right, those in `wrapped` may break."""
-    kinds = dict.fromkeys(numeric, " class='n'") | dict.fromkeys(wrapped, " class='w'")
+    """A table; columns numbered in `numeric` are aligned right, those in `wrapped` may break.
 
-    def cells(tag: str, row: Sequence[str]) -> str:
+    Where the screen is narrow, a table with wrapped columns becomes one block per row, each cell
+    under its name; any other scrolls sideways under its first column.
+    """
+    wide = tuple(wrapped)
+    kinds = dict.fromkeys(numeric, " class='n'") | dict.fromkeys(wide, " class='w'")
+    names = [f" data-name='{text(name)}'" if wide and head else "" for name in head_cells]
+
+    def cells(row: Sequence[str]) -> str:
         return "".join(
-            f"<{tag}{kinds.get(i, '')}>{text(cell)}</{tag}>" for i, cell in enumerate(row)
+            f"<td{kinds.get(i, '')}{names[i]}>{text(cell)}</td>" for i, cell in enumerate(row)
         )
 
-    top = f"<thead><tr>{cells('th', head_cells)}</tr></thead>" if head else ""
-    body = "".join(f"<tr>{cells('td', row)}</tr>" for row in rows)
-    return f"<div class='scroll'><table>{top}<tbody>{body}</tbody></table></div>"
+    titles = "".join(
+        f"<th{kinds.get(i, '')}>{text(cell)}</th>" for i, cell in enumerate(head_cells)
+    )
+    top = f"<thead><tr>{titles}</tr></thead>" if head else ""
+    body = "".join(f"<tr>{cells(row)}</tr>" for row in rows)
+    kind = "rows" if wide else "columns"
+    return (
+        f"<div class='scroll' tabindex='0'><table class='{kind}'>{top}<tbody>{body}</tbody></table>"
+        "</div>"
+    )
 
 
 def text(value: Any) -> str:
@@ -71,7 +84,7 @@ STYLE = """
 * { box-sizing: border-box; }
 body { margin: 0; background: #f4f6f7; color: var(--ink);
   font: 15.5px/1.5 system-ui, -apple-system, "Liberation Sans", Arial, sans-serif; }
-main { max-width: 1180px; margin: 0 auto; padding: 28px 28px 60px; }
+main { max-width: 1280px; margin: 0 auto; padding: 28px 28px 60px; }
 header { border-left: 5px solid var(--blue); padding-left: 18px; margin-bottom: 22px; }
 header p { max-width: 62em; margin: 6px 0 0; }
 .kind { color: var(--blue); font-weight: 600; letter-spacing: .02em; margin: 0; }
@@ -89,6 +102,7 @@ section { background: #fff; border: 1px solid var(--line); border-radius: 6px;
 .flags { margin: 0 0 16px; padding: 10px 14px 10px 32px; border-left: 4px solid var(--orange);
   background: #fcf1ea; }
 .scroll { overflow-x: auto; }
+.below { margin-top: 26px; }
 table { border-collapse: collapse; font-size: 14px; font-variant-numeric: tabular-nums; }
 th { text-align: left; color: var(--soft); font-weight: 600; vertical-align: bottom; }
 th, td { padding: 4px 18px 4px 0; border-bottom: 1px solid #ebeff2; }
@@ -103,8 +117,8 @@ figure { margin: 0; }
 figure.wide { margin-bottom: 26px; min-width: min(100%, 460px); }
 figcaption { margin-top: 4px; }
 img { display: block; width: 100%; height: auto; }
-.pictures { display: grid; grid-template-columns: repeat(2, minmax(0, 1fr)); gap: 28px 30px;
-  margin-top: 14px; }
+.pictures { display: grid; gap: 28px 26px; margin-top: 14px;
+  grid-template-columns: repeat(auto-fill, minmax(min(100%, 320px), 1fr)); }
 dl { margin: 0; display: grid; grid-template-columns: 13em 1fr; gap: 8px 18px; }
 dt { font-weight: 600; }
 dd { margin: 0; max-width: 56em; }
@@ -112,13 +126,27 @@ dd { margin: 0; max-width: 56em; }
   main { padding: 16px 10px 40px; }
   section { padding: 16px 13px; }
   .cards { grid-template-columns: repeat(2, 1fr); }
-  .pictures { grid-template-columns: minmax(0, 1fr); }
   dl { grid-template-columns: 1fr; gap: 2px; }
   dd { margin-bottom: 10px; }
   table { font-size: 13px; }
   th, td { padding-right: 9px; }
   .card strong { font-size: 20px; }
-  td.w { min-width: 24em; }
+}
+@media (max-width: 600px) {
+  /* the right edge is shaded as long as there is more to scroll to */
+  .scroll {
+    background: linear-gradient(to left, #fff 24px, #fff0) right / 40px 100% no-repeat local,
+      linear-gradient(to left, #1c273340, #1c273300) right / 14px 100% no-repeat; }
+  .columns th:first-child, .columns td:first-child { position: sticky; left: 0;
+    background: #fff; padding-right: 12px; }
+  .rows thead { display: none; }
+  .rows, .rows tbody, .rows tr, .rows td { display: block; }
+  .rows tr { padding: 7px 0; border-bottom: 1px solid var(--line); }
+  .rows td { padding: 0; border: 0; text-align: left; white-space: normal; min-width: 0;
+    overflow-wrap: anywhere; }
+  .rows td:first-child { font-weight: 600; }
+  .rows td[data-name]:not(:first-child)::before { content: attr(data-name) ": ";
+    color: var(--soft); }
 }
 @media print {
   @page { margin: 14mm 12mm; }
@@ -128,7 +156,7 @@ dd { margin: 0; max-width: 56em; }
   figure, tr, .card, dt, dd { break-inside: avoid; }
   h2 { break-after: avoid; }
   .cards { grid-template-columns: repeat(4, 1fr); }
-  .pictures { grid-template-columns: repeat(2, minmax(0, 1fr)); gap: 14px; }
+  .pictures { grid-template-columns: repeat(3, minmax(0, 1fr)); gap: 14px; }
   .scroll { overflow: visible; }
   table { font-size: 8.5pt; }
   th, td { padding: 3px 9px 3px 0; }

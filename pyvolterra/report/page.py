@@ -253,7 +253,7 @@ def _overview(pictures: dict[str, bytes], slices: Sequence[ExpirySlice]) -> str:
             "One dot per quote, coloured by where the model lies between bid and ask; ringed where "
             "it lies outside. Runs of one colour are a misfit that noise does not explain.",
         )
-        + f"<div>{_quality(slices)}</div></div>"
+        + f"</div><div class='below'>{_quality(slices)}</div>"
     )
 
 
@@ -331,11 +331,11 @@ def _set_aside(fit: Fit) -> str:
         return "<p>None: every quote that was read passed.</p>"
     first = {(r.stage, r.reason): r.detail for r in reversed(fit.rejections)}
     rows = [
-        (_STAGES.get(stage, stage), reason, f"{count:,}", examples, first.get((stage, reason), ""))
+        (reason, _STAGES.get(stage, stage), f"{count:,}", examples, first.get((stage, reason), ""))
         for stage, reason, count, examples in cleaning_table(fit.rejections)
     ]
     summary = table(
-        ("found when", "reason", "quotes", "file rows", "for example"),
+        ("reason", "found when", "quotes", "file rows", "for example"),
         rows,
         numeric=(2,),
         wrapped=(3, 4),
