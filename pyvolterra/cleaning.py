@@ -31,6 +31,8 @@ class CleaningRules:
     max_strike_factor : float, default 100
         Strikes further from the median strike than this factor are of another unit or mistyped;
         no price is over so many median strikes either.
+    min_strike, max_strike : float, default 1e-30 and 1e30
+        No currency unit makes strikes smaller or larger; far beyond, their squares overflow.
     min_relative_price : float, default 1e-9
         No price but zero is below this many median strikes.
     min_maturity_hours : float, default 12
@@ -55,6 +57,8 @@ class CleaningRules:
     """
 
     max_strike_factor: float = 100.0
+    min_strike: float = 1e-30
+    max_strike: float = 1e30
     min_relative_price: float = 1e-9
     min_maturity_hours: float = 12.0
     max_maturity_years: float = 50.0
@@ -158,11 +162,20 @@ def absurd_strike(quotes: Quotes, rules: CleaningRules) -> Drops:
     """A strike of another order of magnitude is mistyped, and would swamp those beside it."""
     typical, factor = _median_strike(quotes), rules.max_strike_factor
     high, low = quotes.strike / factor > typical, quotes.strike < typical / factor
-    return {
+    drops = {
         int(i): f"strike is {quotes.strike[i]:g}, must be within a factor {factor:g} of the median "
         f"strike {typical:g}"
         for i in np.flatnonzero(high | low)
     }
+    # Where all strikes are absurd alike the median tells nothing.
+    beyond = (quotes.strike < rules.min_strike) | (quotes.strike > rules.max_strike)
+    for i in np.flatnonzero(beyond):
+        detail = (
+            f"strike is {quotes.strike[i]:g}, must be between {rules.min_strike:g} and "
+            f"{rules.max_strike:g}"
+        )
+        drops.setdefault(int(i), detail)
+    return drops
 
 
 def absurd_price(quotes: Quotes, rules: CleaningRules) -> Drops:

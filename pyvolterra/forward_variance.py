@@ -228,8 +228,9 @@ class ForwardVariance:
     ) -> NDArray[np.float64]:
         """Smallest admissible level of each step: ``-V0 L(times[k])``, and 0 on the last step."""
         floor = np.zeros(times.size)
-        if kernel.alpha < 1.0:
-            density = times[:-1] ** -kernel.alpha / math.gamma(1.0 - kernel.alpha)
+        if kernel.alpha < 1.0 and initial_variance > 0.0:
+            with np.errstate(over="ignore"):  # no floor at all at a time of next to nothing
+                density = times[:-1] ** -kernel.alpha / math.gamma(1.0 - kernel.alpha)
             floor[:-1] = -initial_variance * density
         return floor
 

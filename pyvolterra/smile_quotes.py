@@ -80,7 +80,7 @@ def implied_volatility_quotes(
     -------
     smiles : SmileQuotes
         At most one quote per expiry and strike: puts below the forward, calls above, and within
-        0.1 % of it the one with the narrower bid-ask.
+        0.1 % of it the one with the narrower bid-ask, of equals the out-of-the-money one.
     rejections : tuple of Rejection
         Out-of-the-money quotes whose bid, mid or ask lies outside the no-arbitrage bounds, so that
         it has no volatility. In-the-money quotes are not listed: they have served put-call parity.
@@ -129,7 +129,9 @@ def implied_volatility_quotes(
 
     # One quote per strike: sort so that the tighter comes first, and keep the first.
     order = np.flatnonzero(usable)
-    spread = of(quotes.ask - quotes.bid)[order]
+    # Of equals the out-of-the-money one: else the rounding of the widths would decide.
+    in_the_money = (quotes.is_call != (distance > 0.0))[candidate]
+    spread = (of(quotes.ask - quotes.bid) * (1.0 + 1e-9 * in_the_money))[order]
     order = order[np.lexsort((spread, of(quotes.strike)[order], of(quotes.maturity)[order]))]
     index = candidate[order]
     first = np.ones(index.size, dtype=np.bool_)

@@ -138,6 +138,17 @@ def test_strikes_of_another_size(strike):
         clean_quotes(clean)
 
 
+@pytest.mark.parametrize("unit", [1e150, 1e-150])
+def test_a_file_of_absurd_strikes_throughout(unit):
+    quotes = surface(3)
+    names = ("strike", "bid", "ask")
+    spoilt = replace(quotes, **{name: unit * getattr(quotes, name) for name in names})
+    with pytest.raises(pv.QuoteError, match=rf"\({len(quotes)} absurd strike\)"):
+        clean_quotes(spoilt)
+    with pytest.raises(pv.QuoteError, match=r"strike is .*, must be between 1e-30 and 1e\+30"):
+        clean_quotes(spoilt, strict=True)
+
+
 @pytest.mark.parametrize(("bid", "ask"), [(1e6, 1.1e6), (1.5e308, 1.7e308), (0.0, 1e-7)])
 def test_prices_of_another_size(bid, ask):
     quotes = surface(3)

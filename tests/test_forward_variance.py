@@ -114,6 +114,16 @@ def test_without_a_resolvent_to_lean_on_the_floor_is_zero(hurst):
     np.testing.assert_array_equal(floor, 0.0)
 
 
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize(("initial_variance", "floor"), [(0.04, -np.inf), (0.0, 0.0)])
+def test_the_floor_where_the_resolvent_overflows(initial_variance, floor):
+    kernel, times = pv.FractionalKernel(0.49), np.array([1e-320, 1.0])
+    found = pv.ForwardVariance.lowest_drive(kernel, initial_variance, times)
+    np.testing.assert_array_equal(found, [floor, 0.0])
+    curve = pv.ForwardVariance.driven(kernel, initial_variance, times, [0.1, 0.1])
+    assert curve.is_admissible(kernel)
+
+
 @pytest.mark.parametrize(
     ("arguments", "message"),
     [

@@ -116,6 +116,27 @@ def test_at_the_forward_the_tighter_side_serves():
         np.testing.assert_array_equal(smiles.is_call[at], [call_is_tighter])
 
 
+@pytest.mark.parametrize("offset", [-0.5, 0.5])
+def test_of_equal_widths_the_out_of_the_money_side_serves(offset):
+    quotes = surface(6)
+    curve = true_forwards(quotes)
+    point = curve.points[3]
+    here = quotes.expiry == point.expiry
+    strike = np.unique(quotes.strike[here])
+    strike = strike[np.argmin(np.abs(strike - point.forward))]
+    moved = ForwardCurve(
+        tuple(replace(p, forward=strike + offset) if p is point else p for p in curve.points)
+    )
+    pair = np.flatnonzero(here & (quotes.strike == strike))
+    assert pair.size == 2
+    for rounding in (0.0, 1e-12, -1e-12):  # as of a decimal width that binary cannot hold
+        widths = np.where(quotes.is_call[pair], 0.5, 0.5 + rounding)
+        equal = with_changes(quotes, ask=(pair, quotes.bid[pair] + widths))
+        smiles, _ = implied_volatility_quotes(equal, moved)
+        at = (smiles.expiry == point.expiry) & (smiles.strike == strike)
+        np.testing.assert_array_equal(smiles.is_call[at], [offset < 0.0])
+
+
 def test_prices_without_a_volatility_are_rejected():
     quotes = surface(7)
     curve = true_forwards(quotes)
