@@ -23,9 +23,11 @@ from ._version import __version__
 from .errors import AccuracyWarning, MissingDependencyError, MomentExplosionError, QuoteError
 from .forward_variance import ForwardVariance
 from .kernels import ConstantKernel, FractionalKernel
-from .model import TransformInfo, VolterraHeston
+from .model import VolterraHeston
 from .quotes import Quotes, read_quotes
+from .sensitivities import TransformSensitivities
 from .threads import default_threads, set_default_threads
+from .transform import TransformInfo
 
 if TYPE_CHECKING:
     from .calibration import Fit, calibrate
@@ -41,6 +43,7 @@ __all__ = [
     "QuoteError",
     "Quotes",
     "TransformInfo",
+    "TransformSensitivities",
     "VolterraHeston",
     "__version__",
     "black",

@@ -101,17 +101,34 @@ def positive_maturities(value: object, dimensions: int | None = None) -> NDArray
     return array
 
 
+def positive_array(value: object, name: str) -> NDArray[np.float64]:
+    """Finite reals above zero."""
+    array = finite_reals(value, name)
+    require(array > 0.0, array, name, "positive")
+    return array
+
+
+def nonnegative_array(value: object, name: str) -> NDArray[np.float64]:
+    """Finite reals, zero or above."""
+    array = finite_reals(value, name)
+    require(array >= 0.0, array, name, "zero or positive")
+    return array
+
+
+def booleans(value: object, name: str) -> NDArray[np.bool_]:
+    """Whether each option is a call."""
+    array = np.asarray(value)
+    if array.dtype != np.bool_:
+        raise TypeError(f"{name} must hold booleans (True for a call), got dtype {array.dtype}")
+    return array
+
+
 def positive_reals(**arguments: object) -> tuple[NDArray[np.float64], ...]:
     """Positive arrays by name, the maturities within their limit."""
-    arrays = []
-    for name, value in arguments.items():
-        if name == "maturities":
-            arrays.append(positive_maturities(value))
-            continue
-        array = finite_reals(value, name)
-        require(array > 0.0, array, name, "positive")
-        arrays.append(array)
-    return tuple(arrays)
+    return tuple(
+        positive_maturities(value) if name == "maturities" else positive_array(value, name)
+        for name, value in arguments.items()
+    )
 
 
 def broadcast(**arguments: NDArray[Any]) -> tuple[NDArray[Any], ...]:

@@ -11,41 +11,17 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from . import _core
-from ._validation import finite_reals, require
+from ._validation import booleans, broadcast, finite_reals, nonnegative_array, positive_array
 
 __all__ = ["implied_volatility", "price", "vega"]
 
 _BELOW_INTRINSIC, _ABOVE_BOUND = 1, 2  # inversion_status in implied_volatility.hpp
 
 
-def _reals(value: ArrayLike, name: str, minimum: Literal["positive", "zero", ""]) -> NDArray[Any]:
-    array = finite_reals(value, name)
-    if minimum == "positive":
-        require(array > 0.0, array, name, "positive")
-    elif minimum == "zero":
-        require(array >= 0.0, array, name, "zero or positive")
-    return array
-
-
-def _booleans(value: ArrayLike, name: str) -> NDArray[np.bool_]:
-    array = np.asarray(value)
-    if array.dtype != np.bool_:
-        raise TypeError(f"{name} must hold booleans (True for a call), got dtype {array.dtype}")
-    return array
-
-
-def _flat(arrays: dict[str, NDArray[Any]]) -> tuple[tuple[int, ...], dict[str, NDArray[Any]]]:
+def _flat(**arguments: NDArray[Any]) -> tuple[tuple[int, ...], list[NDArray[Any]]]:
     # The common shape, and each argument as a contiguous vector of its full length.
-    try:
-        shape = np.broadcast_shapes(*(a.shape for a in arrays.values()))
-    except ValueError:
-        shapes = ", ".join(f"{name} {a.shape}" for name, a in arrays.items())
-        raise ValueError(f"shapes do not broadcast: {shapes}") from None
-    flat = {
-        name: np.ascontiguousarray(np.broadcast_to(a, shape)).reshape(-1)
-        for name, a in arrays.items()
-    }
-    return shape, flat
+    arrays = broadcast(**arguments)
+    return arrays[0].shape, [np.ascontiguousarray(a).reshape(-1) for a in arrays]
 
 
 def _shaped(values: NDArray[np.float64], shape: tuple[int, ...]) -> Any:
@@ -105,16 +81,14 @@ def price(
     2.2112
     """
     shape, flat = _flat(
-        {
-            "forward": _reals(forward, "forward", "positive"),
-            "strike": _reals(strike, "strike", "positive"),
-            "maturity": _reals(maturity, "maturity", "zero"),
-            "volatility": _reals(volatility, "volatility", "zero"),
-            "discount": _reals(discount, "discount", "positive"),
-            "call": _booleans(call, "call"),
-        }
+        forward=positive_array(forward, "forward"),
+        strike=positive_array(strike, "strike"),
+        maturity=nonnegative_array(maturity, "maturity"),
+        volatility=nonnegative_array(volatility, "volatility"),
+        discount=positive_array(discount, "discount"),
+        call=booleans(call, "call"),
     )
-    return _shaped(_core.black_price(*flat.values()), shape)
+    return _shaped(_core.black_price(*flat), shape)
 
 
 def vega(
@@ -155,15 +129,13 @@ def vega(
     :func:`price`. Source: see the module.
     """
     shape, flat = _flat(
-        {
-            "forward": _reals(forward, "forward", "positive"),
-            "strike": _reals(strike, "strike", "positive"),
-            "maturity": _reals(maturity, "maturity", "zero"),
-            "volatility": _reals(volatility, "volatility", "zero"),
-            "discount": _reals(discount, "discount", "positive"),
-        }
+        forward=positive_array(forward, "forward"),
+        strike=positive_array(strike, "strike"),
+        maturity=nonnegative_array(maturity, "maturity"),
+        volatility=nonnegative_array(volatility, "volatility"),
+        discount=positive_array(discount, "discount"),
     )
-    return _shaped(_core.black_vega(*flat.values()), shape)
+    return _shaped(_core.black_vega(*flat), shape)
 
 
 def implied_volatility(
@@ -232,16 +204,14 @@ def implied_volatility(
     if errors not in ("raise", "nan"):
         raise ValueError(f'errors must be "raise" or "nan", got {errors!r}')
     shape, flat = _flat(
-        {
-            "price": _reals(price, "price", ""),
-            "forward": _reals(forward, "forward", "positive"),
-            "strike": _reals(strike, "strike", "positive"),
-            "maturity": _reals(maturity, "maturity", "positive"),
-            "discount": _reals(discount, "discount", "positive"),
-            "call": _booleans(call, "call"),
-        }
+        price=finite_reals(price, "price"),
+        forward=positive_array(forward, "forward"),
+        strike=positive_array(strike, "strike"),
+        maturity=positive_array(maturity, "maturity"),
+        discount=positive_array(discount, "discount"),
+        call=booleans(call, "call"),
     )
-    volatility, status = _core.black_implied_volatility(*flat.values())
+    volatility, status = _core.black_implied_volatility(*flat)
     outside = (status == _BELOW_INTRINSIC) | (status == _ABOVE_BOUND)
     if (outside & (errors == "raise")).any():
         _refuse(int(np.argmax(outside)), int(status[np.argmax(outside)]), shape, flat)
@@ -256,10 +226,8 @@ def _place(index: int, shape: tuple[int, ...]) -> str:
     return f"[{', '.join(str(int(i)) for i in where)}]" if where else ""
 
 
-def _refuse(
-    index: int, status: int, shape: tuple[int, ...], flat: dict[str, NDArray[Any]]
-) -> NoReturn:
-    value, forward, strike, _, discount, is_call = (a[index].item() for a in flat.values())
+def _refuse(index: int, status: int, shape: tuple[int, ...], flat: list[NDArray[Any]]) -> NoReturn:
+    value, forward, strike, _, discount, is_call = (a[index].item() for a in flat)
     if status == _BELOW_INTRINSIC:
         payoff = forward - strike if is_call else strike - forward
         formula = "max(forward - strike, 0)" if is_call else "max(strike - forward, 0)"

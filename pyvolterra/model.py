@@ -1,50 +1,17 @@
 """The affine Volterra model of one rough variance factor: transforms, prices, volatilities."""
 
-import sys
-import warnings
 from collections.abc import Iterable
-from dataclasses import dataclass
-from types import FrameType
 from typing import Any, Self
 
 import numpy as np
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import ArrayLike
 
-from . import _core, black
-from ._validation import (
-    broadcast,
-    finite_number,
-    fourier_arguments,
-    positive_integer,
-    positive_maturities,
-    positive_number,
-    positive_reals,
-    require,
-)
-from .errors import AccuracyWarning
+from . import _core, prices
+from ._validation import finite_number, positive_number
 from .forward_variance import ForwardVariance
 from .kernels import Kernel
 from .sensitivities import TransformSensitivities, transform_sensitivities
-from .threads import default_threads
-
-SCHEMES = ("auto", "graded", "adams")
-MOST_STEPS = 100_000
-
-
-@dataclass(frozen=True)
-class TransformInfo:
-    """What ``full_output=True`` adds to a transform.
-
-    Attributes
-    ----------
-    error_estimate : ndarray of float64, the shape of the values
-        Estimated absolute error of the characteristic function.
-    scheme : str
-        The scheme used: ``"closed form"``, ``"graded"`` or ``"adams"``.
-    """
-
-    error_estimate: Any
-    scheme: str
+from .transform import log_transform
 
 
 class VolterraHeston:
@@ -261,54 +228,7 @@ class VolterraHeston:
         maturity (adams). Safe to call from several threads, which share the tables of the scheme.
         Formula: Affine forward variance models, Finance Stoch. 23, 2019 (from memory).
         """
-        nodes = fourier_arguments(u)
-        times = positive_maturities(maturities, dimensions=1)
-        bound = positive_number(tolerance, "tolerance")
-        if scheme not in SCHEMES:
-            raise ValueError(f"scheme must be one of {', '.join(SCHEMES)}, got {scheme!r}")
-        if steps is not None and scheme != "adams":
-            raise ValueError("steps needs scheme='adams'")
-        count = 0 if steps is None else positive_integer(steps, "steps")
-        if count > MOST_STEPS:
-            raise ValueError(f"steps must be at most {MOST_STEPS}, got {count}")
-        workers = default_threads() if threads is None else positive_integer(threads, "threads")
-        values, errors, worst = _core.log_transform(
-            self._core_model,
-            self.forward_variance._arguments,
-            np.ascontiguousarray(nodes.ravel()),
-            np.ascontiguousarray(times.ravel()),
-            scheme,
-            count,
-            bound,
-            workers,
-            full_output,
-        )
-        if steps is None and not worst <= 1.0:
-            _warn_of_accuracy(
-                f"tolerance {bound:.1e} not met: estimated error {worst * bound:.1e} of the "
-                "characteristic function relative to its value at i Im u" + self._doubt_of_curve()
-            )
-        shape = times.shape + nodes.shape
-        result: Any = values.reshape(shape) if shape else complex(values[0, 0])
-        if not full_output:
-            return result
-        return result, TransformInfo(
-            errors.reshape(shape) if shape else float(errors[0, 0]), self._scheme_used(scheme)
-        )
-
-    def _doubt_of_curve(self) -> str:
-        """What a warning says about a curve that the model cannot have."""
-        if self.forward_variance.is_admissible(self.kernel):
-            return ""
-        return (
-            "; the forward-variance curve falls faster than the model allows (its variance would "
-            "become negative), so that the characteristic function may be larger than 1"
-        )
-
-    def _scheme_used(self, scheme: str) -> str:
-        if scheme != "auto":
-            return scheme
-        return "closed form" if self.kernel.hurst == 0.5 else "graded"
+        return log_transform(self, u, maturities, tolerance, scheme, steps, threads, full_output)
 
     def characteristic_function(
         self,
@@ -324,16 +244,9 @@ class VolterraHeston:
         """E[exp(iuX_T)]; arguments, shapes, errors and accuracy as in
         :meth:`log_characteristic_function`.
         """
-        values, info = self.log_characteristic_function(
-            u,
-            maturities,
-            tolerance=tolerance,
-            scheme=scheme,
-            steps=steps,
-            threads=threads,
-            full_output=True,
-        )
-        result = np.exp(values)
+        found = log_transform(self, u, maturities, tolerance, scheme, steps, threads, full_output)
+        logarithm, info = found if full_output else (found, None)
+        result = np.exp(logarithm)
         if np.ndim(result) == 0:
             result = complex(result)
         return (result, info) if full_output else result
@@ -443,20 +356,7 @@ class VolterraHeston:
         estimate meets the tolerance; in-the-money ones follow from put-call parity. Cost: one
         transform of 40 to 200 arguments per distinct maturity.
         """
-        k, t, f, d = positive_reals(
-            strikes=strikes, maturities=maturities, forward=forward, discount=discount
-        )
-        is_call = np.asarray(call)
-        if is_call.dtype != bool:
-            raise TypeError(f"call must hold booleans, got dtype {is_call.dtype}")
-        k, t, f, d, is_call = broadcast(
-            strikes=k, maturities=t, forward=f, discount=d, call=is_call
-        )
-        otm = self._out_of_the_money(k, t, f, positive_number(tolerance, "tolerance"))
-        otm = otm * f
-        intrinsic = np.where(is_call, f - k, k - f)
-        price = d * (otm + np.maximum(intrinsic, 0.0))
-        return float(price) if price.ndim == 0 else price
+        return prices.price(self, strikes, maturities, forward, discount, call, tolerance)
 
     def implied_volatility(
         self,
@@ -496,13 +396,7 @@ class VolterraHeston:
         The error of a volatility is that of the price over forward times the Black vega. Cost: that
         of :meth:`price` plus the inversion.
         """
-        bound = positive_number(tolerance, "tolerance")
-        k, t, f = positive_reals(strikes=strikes, maturities=maturities, forward=forward)
-        k, t, f = broadcast(strikes=k, maturities=t, forward=f)
-        otm = self._out_of_the_money(k, t, f, bound)
-        otm = np.where(otm > bound, otm, -1.0)
-        result = black.implied_volatility(otm, 1.0, k / f, t, call=k >= f, errors="nan")
-        return float(result) if np.ndim(result) == 0 else result
+        return prices.implied_volatility(self, strikes, maturities, forward, tolerance)
 
     def moment_strip(self, maturity: float) -> tuple[float, float]:
         """Critical moments: E[exp(p X_T)] is finite for every p between them.
@@ -535,10 +429,7 @@ class VolterraHeston:
         The moment formula for implied volatility at extreme strikes, Math. Finance 14, 2004 (from
         memory). They are moments of the model and carry its risk.
         """
-        years = finite_number(maturity, "maturity")
-        if years <= 0.0:
-            raise ValueError(f"maturity must be positive, got {years}")
-        return _core.moment_strip(self._core_model, years)
+        return _core.moment_strip(self._core_model, positive_number(maturity, "maturity"))
 
     def explosion_time(self, moment: float) -> float:
         r"""First maturity at which E[exp(p X_T)] is infinite.
@@ -573,42 +464,3 @@ class VolterraHeston:
         explodes exactly when it does in the classical model of the same parameters).
         """
         return _core.explosion_time(self._core_model, finite_number(moment, "moment"))
-
-    def _out_of_the_money(
-        self,
-        strikes: NDArray[np.float64],
-        maturities: NDArray[np.float64],
-        forward: NDArray[np.float64],
-        tolerance: float,
-    ) -> NDArray[np.float64]:
-        # Prices per unit of forward: calls where strike >= forward.
-        with np.errstate(over="ignore", under="ignore"):
-            moneyness = strikes / forward
-        fine = (moneyness > 0.0) & (moneyness < np.inf)
-        require(fine, moneyness, "strikes / forward", "a positive finite number")
-        prices, error = _core.out_of_the_money_prices(
-            self._core_model,
-            self.forward_variance._arguments,
-            np.ascontiguousarray(moneyness.ravel()),
-            np.ascontiguousarray(maturities.ravel()),
-            tolerance,
-        )
-        if not error <= tolerance:
-            _warn_of_accuracy(
-                f"tolerance {tolerance:.1e} not met: estimated price error {error:.1e} per unit of "
-                "forward"
-            )
-        return prices.reshape(strikes.shape)
-
-
-def _warn_of_accuracy(message: str) -> None:
-    warnings.warn(message, AccuracyWarning, stacklevel=_outside_package())
-
-
-def _outside_package() -> int:
-    """Stack level of the first caller outside the package, so that a warning points at it."""
-    level = 1
-    frame: FrameType | None = sys._getframe(1)
-    while frame is not None and frame.f_globals.get("__name__", "").startswith("pyvolterra."):
-        level, frame = level + 1, frame.f_back
-    return level

@@ -1,6 +1,5 @@
 """Derivatives of the log-transform with respect to the parameters of the model."""
 
-import warnings
 from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -9,13 +8,13 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from . import _core
+from ._accuracy import warn_of_accuracy
 from ._validation import (
     fourier_arguments,
     positive_integer,
     positive_maturities,
     positive_number,
 )
-from .errors import AccuracyWarning
 from .threads import default_threads
 
 if TYPE_CHECKING:
@@ -76,11 +75,9 @@ def transform_sensitivities(
         workers,
     )
     if missed:
-        warnings.warn(
+        warn_of_accuracy(
             f"tolerance {bound:.1e} not met at {missed} u; where no mesh gave a solution the "
-            "result is nan",
-            AccuracyWarning,
-            stacklevel=3,
+            "result is nan"
         )
 
     def shaped(array: NDArray[np.complex128]) -> Any:
