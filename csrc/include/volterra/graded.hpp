@@ -180,7 +180,8 @@ inline void solve(const graded_block& b) {
             for (std::size_t p = 0; p < packs; ++p) {
                 predicted[p] = load_complex(at_nodes + p * pack_width);
                 const complex_pack middle = load_complex(at_nodes + (m / 2) * row + p * pack_width);
-                const pack bounded = smaller(larger(decay[p], broadcast(-200.0)), broadcast(200.0));
+                const pack ahead = larger(decay[p], limit[p] * broadcast(k ? b.settling[k - 1] : 0.0));
+                const pack bounded = smaller(larger(ahead, broadcast(-200.0)), broadcast(200.0));
                 modulus[p] = b.of_logarithm ? broadcast(1.0) : power_of_two(1.4427 * bounded);
                 strict[p] = broadcast(wanted) * modulus[p] * modulus[p] *
                             (norm(f[p].derivative(middle)) + scale * scale);

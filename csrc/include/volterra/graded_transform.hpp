@@ -18,9 +18,10 @@
 
 namespace volterra {
 
-// A u whose graded_record::doubt times this exceeds the error asked for is solved again one level
-// finer: one in a thousand (none of them needlessly inaccurate, so far; see mesh.hpp).
-inline constexpr double graded_doubt = 0.005;
+// A u whose graded_record::doubt times this exceeds the error asked for is solved again one level finer:
+// fewer than one in a thousand within the ranges of mesh.hpp, where the mesh would have done; it is
+// there for parameters beyond them.
+inline constexpr double graded_doubt = 0.002;
 
 // |phi| is not solved further where it is below this share of the error asked for.
 inline constexpr double graded_negligible = 0.05;
@@ -33,6 +34,18 @@ struct error_bounds {
 
     double operator()(std::size_t t, std::size_t i) const { return bound[t * lines + line[i]]; }
 };
+
+// The rung of mesh.hpp that a u, or a line of them, starts from. Near the imaginary axis beyond the
+// moments 0 and 1, where psi may be close to its explosion, the ladder is too short by up to a half.
+inline std::size_t first_rung(double bound, double real, double imaginary) {
+    const bool close = std::abs(real) < 1.0 && (imaginary >= 0.0 || imaginary <= -1.0);
+    return 2 * graded_level_for(bound) + close;
+}
+
+// The rung whose solution tells the error of another one's.
+inline std::size_t check_rung(std::size_t rung) {
+    return std::min(rung + (rung % 2 ? 2 : 1), graded_rungs - 1);
+}
 
 // The u of a call that are interpolated along one line.
 struct line_task {
@@ -57,7 +70,7 @@ inline std::vector<line_task> lines_of(const model_parameters& m, const variance
         if (at == 0) {
             const double variance = detail::integrated_curve(curve, m.alpha(), longest) / longest;
             lines.push_back({make_line_grid(m, u[i].imag(), longest, variance, bound[i]), variance,
-                             bound[i], 2 * graded_level_for(bound[i]), {}, {}});
+                             bound[i], first_rung(bound[i], 0.0, u[i].imag()), {}, {}});
             at = lines.size();
         }
         if (std::abs(u[i].real()) <= lines[at - 1].grid.reach) lines[at - 1].members.push_back(i);
@@ -88,13 +101,13 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
     std::vector<char> open(n, 1);
     for (std::size_t i = 0; i < n; ++i) {
         if (i && bounds.line[i] == bounds.line[i - 1]) {
-            bound[i] = bound[i - 1], level[i] = level[i - 1], cut[i] = cut[i - 1];
-            continue;
+            bound[i] = bound[i - 1], cut[i] = cut[i - 1];
+        } else {
+            for (std::size_t t = 0; t < maturities.size(); ++t)
+                bound[i] = std::min(bound[i], bounds(t, i));
+            cut[i] = std::log(graded_negligible * bound[i]);
         }
-        for (std::size_t t = 0; t < maturities.size(); ++t)
-            bound[i] = std::min(bound[i], bounds(t, i));
-        level[i] = 2 * graded_level_for(bound[i]);
-        cut[i] = std::log(graded_negligible * bound[i]);
+        level[i] = first_rung(bound[i], u[i].real(), u[i].imag());
     }
     auto pass = [&](std::span<std::complex<double>> into, graded_record& record) {
         for (std::size_t l = 0; l < graded_rungs; ++l) {
@@ -123,7 +136,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
         for (std::size_t t = 0; t < maturities.size(); ++t)
             for (std::size_t j = 0; j < nodes; ++j)
                 if (!(line.tails[t] * line.grid.scale[j] * std::exp(at_nodes[t * nodes + j].real()) <
-                      0.1 * bounds(t, line.members.front())))
+                      0.03 * bounds(t, line.members.front())))
                     return false;
         interpolate_line(kernels, line.grid, at_nodes, u, line.members, into);
         return true;
@@ -176,15 +189,16 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
     for (std::size_t i = 0; i < n; ++i) c0[i] = std::abs(riccati(m, u[i]).c0);
     for (std::size_t i = 0; i < n; ++i) {
         open[i] = coarse.solved[i];
-        level[i] += 1;
+        level[i] = check_rung(level[i]);
         for (std::size_t t = 0; t < maturities.size(); ++t) errors[t * n + i] = infinity;
     }
     for (auto& line : lines) {
-        line.level += 1;
+        line.level = check_rung(line.level);
         line.grid = make_line_grid(m, line.grid.imaginary, maturities.back(), line.variance,
                                    0.05 * line.tolerance);
         const bool good = pass_line(line, finer);
-        for (const std::size_t i : line.members) fine.solved[i] = good, open[i] = false;
+        for (const std::size_t i : line.members)
+            fine.solved[i] = good, open[i] = false, level[i] = line.level;
     }
     bool first_round = true;
     for (bool again = true; again; first_round = false) {
