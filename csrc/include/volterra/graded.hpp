@@ -82,11 +82,7 @@ VOLTERRA_INLINE void apply_functionals(const graded_block& b, const double* z, c
             multiply_tile<n>(acc, b.first_psi + r, b.functionals, psi, m + 1);
             multiply_tile<n>(acc, b.weights_psi + r, b.functionals, psi + (m + 1) * row, others);
         }
-        VOLTERRA_UNROLL
-        for (std::size_t i = 0; i < n; ++i)
-            VOLTERRA_UNROLL
-            for (std::size_t c = 0; c < row_packs; ++c)
-                store(b.values + (r + i) * row + c * pack_width, acc[i][c]);
+        store_tile<n>(acc, b.values + r * row);
         r += n;
     };
     while (r + tile <= b.functionals) rows.template operator()<tile>();
@@ -94,24 +90,33 @@ VOLTERRA_INLINE void apply_functionals(const graded_block& b, const double* z, c
     while (r < b.functionals) rows.template operator()<1>();
 }
 
-// B^-1 W^-1 times what the elements before k contribute to the nodes of element k.
+// Blocks that act on what came before an element; see graded_plan.
+struct history_blocks {
+    const double *from_zero, *from_first, *lag;
+    std::size_t lags;
+};
+
+// acc += the rows top, top + 1, ... of what the elements before k contribute to element k.
+template <std::size_t m, std::size_t rows>
+VOLTERRA_INLINE void add_history(pack (&acc)[rows][row_packs], const history_blocks& b,
+                                 std::size_t k, std::size_t top, const double* G) {
+    if (k == 0) {
+        multiply_tile<rows>(acc, b.from_zero + top, m, G, 1);
+        return;
+    }
+    multiply_tile<rows>(acc, b.from_first + (k - 1) * m * (m + 1) + top, m, G, m + 1);
+    multiply_tile<rows>(acc, b.lag + (b.lags + 1 - k) * m * m + top, m, G + (1 + m) * row,
+                        (k - 1) * m);
+}
+
+// h = B^-1 W^-1 times what the elements before k contribute to the nodes of element k.
 template <std::size_t m>
 VOLTERRA_INLINE void history(const graded_block& b, std::size_t k, const double* G, double* h) {
     constexpr std::size_t rows = tile_rows<m>;
     for (std::size_t top = 0; top < m; top += rows) {
         pack acc[rows][row_packs] = {};
-        if (k == 0) {
-            multiply_tile<rows>(acc, b.from_zero + top, m, G, 1);
-        } else {
-            multiply_tile<rows>(acc, b.from_first + (k - 1) * m * (m + 1) + top, m, G, m + 1);
-            multiply_tile<rows>(acc, b.lag + (b.lags + 1 - k) * m * m + top, m, G + (1 + m) * row,
-                                (k - 1) * m);
-        }
-        VOLTERRA_UNROLL
-        for (std::size_t i = 0; i < rows; ++i)
-            VOLTERRA_UNROLL
-            for (std::size_t c = 0; c < row_packs; ++c)
-                store(h + (top + i) * row + c * pack_width, acc[i][c]);
+        add_history<m>(acc, {b.from_zero, b.from_first, b.lag, b.lags}, k, top, G);
+        store_tile<rows>(acc, h + top * row);
     }
 }
 

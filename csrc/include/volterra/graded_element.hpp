@@ -90,6 +90,14 @@ VOLTERRA_INLINE void multiply_tile(pack (&acc)[rows][row_packs], const double* w
     }
 }
 
+template <std::size_t rows>
+VOLTERRA_INLINE void store_tile(const pack (&acc)[rows][row_packs], double* to) {
+    VOLTERRA_UNROLL
+    for (std::size_t i = 0; i < rows; ++i)
+        VOLTERRA_UNROLL
+        for (std::size_t c = 0; c < row_packs; ++c) store(to + i * row + c * pack_width, acc[i][c]);
+}
+
 VOLTERRA_INLINE void copy_rows(const double* from, std::size_t rows, double* to) {
     for (std::size_t i = 0; i < rows * row; i += pack_width) store(to + i, load(from + i));
 }
@@ -105,11 +113,7 @@ VOLTERRA_INLINE void multiply(const double* w, const double* in, std::size_t col
     for (std::size_t top = 0; top < m; top += rows) {
         pack acc[rows][row_packs] = {};
         multiply_tile<rows>(acc, w + top, m, in, columns);
-        VOLTERRA_UNROLL
-        for (std::size_t i = 0; i < rows; ++i)
-            VOLTERRA_UNROLL
-            for (std::size_t c = 0; c < row_packs; ++c)
-                store(out + (top + i) * row + c * pack_width, acc[i][c]);
+        store_tile<rows>(acc, out + top * row);
     }
 }
 
@@ -327,11 +331,7 @@ VOLTERRA_INLINE void newton_with_common_slope(const graded_matrices& w, const qu
                 for (std::size_t c = 0; c < row_packs; ++c) acc[i][c] += a * x[c];
             }
         }
-        VOLTERRA_UNROLL
-        for (std::size_t i = 0; i < rows; ++i)
-            VOLTERRA_UNROLL
-            for (std::size_t c = 0; c < row_packs; ++c)
-                store(y + (top + i) * row + c * pack_width, acc[i][c]);
+        store_tile<rows>(acc, y + top * row);
     }
     solve_shifted<m>(w.s, factors, y);
     VOLTERRA_UNROLL

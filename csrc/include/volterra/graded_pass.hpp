@@ -88,6 +88,87 @@ struct graded_record {
           guessed_size(n, 0.0) {}
 };
 
+namespace detail {
+
+// The u of one pass, ordered by the number of elements of their meshes.
+struct mesh_order {
+    std::vector<riccati_coefficients> c;
+    std::vector<std::size_t> elements, order;
+    std::size_t most;
+
+    // With `one_mesh` the longest mesh serves all.
+    mesh_order(const graded_level& level, const model_parameters& m,
+               std::span<const std::complex<double>> u, std::span<const std::size_t> which,
+               double horizon, bool one_mesh)
+        : c(which.size()), elements(which.size()), order(which.size()) {
+        std::vector<std::size_t> end(graded_most_elements + 2, 0);
+        for (std::size_t i = 0; i < which.size(); ++i) {
+            c[i] = riccati(m, u[which[i]]);
+            elements[i] = graded_elements(level, m.alpha(), c[i], horizon);
+        }
+        most = *std::ranges::max_element(elements);
+        if (one_mesh) std::ranges::fill(elements, most);
+        for (const std::size_t k : elements) ++end[k + 1];
+        for (std::size_t k = 1; k < end.size(); ++k) end[k] += end[k - 1];
+        for (std::size_t i = 0; i < order.size(); ++i) order[end[elements[i]]++] = i;  // stable
+    }
+
+    std::size_t size() const { return order.size(); }
+    std::size_t elements_at(std::size_t place) const { return elements[order[place]]; }
+
+    // The first place after `start` with another mesh.
+    std::size_t end_of_mesh(std::size_t start) const {
+        std::size_t end = start;
+        while (end < size() && elements_at(end) == elements_at(start)) ++end;
+        return end;
+    }
+};
+
+// The arrays by which one block of lanes speaks to the solver.
+struct lane_arrays {
+    std::size_t lanes;
+    aligned_buffer storage;
+    double *c0, *c1, *status, *negligible, *doubt, *guessed, *remainder;
+
+    lane_arrays(std::size_t count, graded_block& block, const graded_level& level,
+                const model_parameters& m, const variance_curve& curve, double horizon)
+        : lanes(count), storage(9 * count), c0(storage.data()), c1(c0 + 2 * count),
+          status(c1 + 2 * count), negligible(status + count), doubt(negligible + count),
+          guessed(doubt + count), remainder(guessed + count) {
+        std::fill_n(negligible, count, -std::numeric_limits<double>::infinity());
+        block.c0 = c0, block.c1 = c1, block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
+        block.accuracy = level.accuracy;
+        block.least_variance = least_variance(curve, m.mean_reversion);
+        block.typical_variance = integrated_curve(curve, m.alpha(), horizon) / horizon;
+        block.negligible = negligible, block.status = status, block.doubt = doubt;
+        block.guessed = guessed, block.remainder = remainder;
+    }
+
+    void load(std::size_t lane, const riccati_coefficients& c) {
+        c0[lane] = c.c0.real(), c0[lanes + lane] = c.c0.imag();
+        c1[lane] = c.c1.real(), c1[lanes + lane] = c.c1.imag();
+    }
+};
+
+// to[targets[i]] = lane i of a row; false for the lanes that are not finite, through `solved`.
+inline void hand_out(const double* row, std::size_t lanes, std::span<const std::size_t> targets,
+                     std::complex<double>* to, std::vector<char>& solved) {
+    const double *const re = row, *const im = row + lanes;
+    const std::size_t filled = targets.size(), at = targets[0];
+    double finite = 0.0;
+    for (std::size_t i = 0; i < filled; ++i) finite += re[i] * 0.0 + im[i] * 0.0;
+    bool contiguous = true;
+    for (std::size_t i = 1; i < filled; ++i) contiguous &= targets[i] == at + i;
+    if (contiguous)
+        for (std::size_t i = 0; i < filled; ++i) to[at + i] = {re[i], im[i]};
+    else
+        for (std::size_t i = 0; i < filled; ++i) to[targets[i]] = {re[i], im[i]};
+    for (std::size_t i = 0; finite != 0.0 && i < filled; ++i)
+        if (re[i] - re[i] != 0.0 || im[i] - im[i] != 0.0) solved[targets[i]] = false;
+}
+
+}  // namespace detail
+
 // One solve at one level of accuracy of the u numbered in `which`. values[r * u.size() + i]:
 // functional r (maturity, or maturity and elementary curve when `basis`) at u[i]. Where |phi| is
 // below negligible[i] it is not solved further. For the nodes of a line (graded_line.hpp) it is log phi
@@ -98,80 +179,45 @@ inline void graded_pass(const target_kernels& kernels, const graded_level& level
                         std::span<const std::size_t> which, std::span<const double> maturities,
                         bool basis, bool on_line, std::span<const double> negligible,
                         std::span<std::complex<double>> values, graded_record& record) {
-    const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes, n = which.size();
+    const std::size_t lanes = kernels.graded_lanes;
     const double horizon = maturities.back();
-    std::vector<riccati_coefficients> c(n);
-    std::vector<std::size_t> elements(n), count(graded_most_elements + 2, 0), order(n);
-    for (std::size_t i = 0; i < n; ++i) {
-        c[i] = riccati(m, u[which[i]]);
-        elements[i] = graded_elements(level, m.alpha(), c[i], horizon);
-    }
-    if (on_line) std::fill(elements.begin(), elements.end(), *std::ranges::max_element(elements));
-    for (const std::size_t k : elements) ++count[k + 1];
-    std::size_t most = graded_most_elements;
-    while (most > 1 && count[most + 1] == 0) --most;
-    for (std::size_t k = 1; k < count.size(); ++k) count[k] += count[k - 1];
-    for (std::size_t i = 0; i < n; ++i) order[count[elements[i]]++] = i;  // stable
-
-    const auto shared_plan = plan_of(kernels, m.alpha(), level.nodes, level.ratio, most);
-    const graded_plan& plan = *shared_plan;
-    const graded_meshes meshes(plan, horizon, most);
+    const detail::mesh_order meshed(level, m, u, which, horizon, on_line);
+    const auto plan = plan_of(kernels, m.alpha(), level.nodes, level.ratio, meshed.most);
+    const graded_meshes meshes(*plan, horizon, meshed.most);
     const auto functional = make_functional(meshes, curve, m.mean_reversion, maturities, basis);
-    const std::size_t per_lane = 6;  // status, negligible, doubt, guessed, remainder, spare
-    aligned_buffer inputs(2 * row), outputs(per_lane * lanes), block_values(functional.count * row);
-    aligned_buffer workspace(graded_workspace(level.nodes, most, lanes));
-    double *const c0 = inputs.data(), *const c1 = c0 + row;
-    double *const status = outputs.data(), *const cut = status + lanes, *const doubt = cut + lanes,
-           *const guessed = doubt + lanes, *const remainder = guessed + lanes;
-    auto block = detail::work_order(plan);
-    block.c0 = c0, block.c1 = c1, block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
-    block.accuracy = level.accuracy, block.of_logarithm = on_line;
-    block.least_variance = detail::least_variance(curve, m.mean_reversion);
-    block.typical_variance = detail::integrated_curve(curve, m.alpha(), horizon) / horizon;
-    block.negligible = cut, block.doubt = doubt, block.guessed = guessed;
-    block.remainder = remainder, block.status = status;
+    aligned_buffer block_values(functional.count * 2 * lanes);
+    aligned_buffer workspace(graded_workspace(level.nodes, meshed.most, lanes));
+    auto block = detail::work_order(*plan);
+    detail::lane_arrays arrays(lanes, block, level, m, curve, horizon);
+    block.of_logarithm = on_line;
     block.values = block_values.data(), block.workspace = workspace.data();
-    for (std::size_t start = 0; start < n;) {
-        const std::size_t k = elements[order[start]], end = count[k];
+    std::vector<std::size_t> targets;
+    for (std::size_t start = 0; start < meshed.size();) {
+        const std::size_t k = meshed.elements_at(start), end = meshed.end_of_mesh(start);
         const auto first = make_first_functional(meshes, functional, k, curve, maturities, basis);
         detail::set_mesh(block, meshes, k, functional, first);
         for (; start < end; start += lanes) {
             const std::size_t filled = std::min(lanes, end - start);
+            targets.clear();
             for (std::size_t i = 0; i < lanes; ++i) {  // idle lanes repeat the last one
-                const std::size_t from = order[start + std::min(i, filled - 1)];
-                c0[i] = c[from].c0.real(), c0[lanes + i] = c[from].c0.imag();
-                c1[i] = c[from].c1.real(), c1[lanes + i] = c[from].c1.imag();
-                cut[i] = negligible[which[from]];
+                const std::size_t from = meshed.order[start + std::min(i, filled - 1)];
+                arrays.load(i, meshed.c[from]);
+                arrays.negligible[i] = negligible[which[from]];
+                if (i < filled) targets.push_back(which[from]);
             }
             kernels.solve_graded_block(block);
-            bool contiguous = true;
-            const std::size_t at = which[order[start]];
             for (std::size_t i = 0; i < filled; ++i) {
-                const std::size_t to = which[order[start + i]];
-                contiguous &= to == at + i;
-                record.solved[to] = status[i] == 0.0;
-                record.doubt[to] = doubt[i];
-                const auto used = static_cast<std::size_t>(guessed[i]);
+                const std::size_t to = targets[i];
+                record.solved[to] = arrays.status[i] == 0.0;
+                record.doubt[to] = arrays.doubt[i];
+                const auto used = static_cast<std::size_t>(arrays.guessed[i]);
                 record.guessed_from[to] = used < k ? block.lengths[used - 1]
                                                    : std::numeric_limits<double>::infinity();
-                record.guessed_size[to] = used < k ? std::exp(remainder[i]) : 0.0;
+                record.guessed_size[to] = used < k ? std::exp(arrays.remainder[i]) : 0.0;
             }
-            for (std::size_t r = 0; r < functional.count; ++r) {
-                const double* const re = block_values.data() + r * row;
-                const double* const im = re + lanes;
-                std::complex<double>* const to = values.data() + r * u.size();
-                double finite = 0.0;
-                for (std::size_t i = 0; i < filled; ++i) finite += re[i] * 0.0 + im[i] * 0.0;
-                if (contiguous)
-                    for (std::size_t i = 0; i < filled; ++i) to[at + i] = {re[i], im[i]};
-                else
-                    for (std::size_t i = 0; i < filled; ++i)
-                        to[which[order[start + i]]] = {re[i], im[i]};
-                if (finite == 0.0) continue;
-                for (std::size_t i = 0; i < filled; ++i)
-                    if (re[i] - re[i] != 0.0 || im[i] - im[i] != 0.0)
-                        record.solved[which[order[start + i]]] = false;
-            }
+            for (std::size_t r = 0; r < functional.count; ++r)
+                detail::hand_out(block_values.data() + r * 2 * lanes, lanes, targets,
+                                 values.data() + r * u.size(), record.solved);
         }
         start = end;
     }

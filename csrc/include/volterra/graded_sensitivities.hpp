@@ -9,34 +9,19 @@
 #include <cmath>
 #include <complex>
 #include <cstddef>
-#include <cstdint>
 #include <limits>
-#include <map>
 #include <memory>
 #include <numeric>
 #include <span>
 #include <vector>
 
-#include "targets.hpp"
 #include "volterra/classical.hpp"
 #include "volterra/explosion.hpp"
 #include "volterra/graded_transform.hpp"
 #include "volterra/parallel.hpp"
-#include "volterra/tangent_functional.hpp"
+#include "volterra/tangent_pass.hpp"
 
 namespace volterra {
-
-// Which derivatives are wanted.
-struct sensitivity_request {
-    bool hurst = true, vol_of_vol = true, correlation = true, mean_reversion = true;
-    bool curve = true;  // one per elementary curve: V0 first when driven, then the levels
-    double tolerance = 1e-8;  // of phi, relative to phi(i Im u)
-    std::size_t threads = 1;
-
-    std::size_t parameters() const {
-        return std::size_t{hurst} + vol_of_vol + correlation + mean_reversion;
-    }
-};
 
 // The u solved for at a time: few enough to keep the working memory small.
 inline constexpr std::size_t sensitivity_chunk = 1024;
@@ -46,178 +31,6 @@ inline constexpr std::size_t sensitivity_chunk = 1024;
 inline constexpr double sensitivity_accuracy = 10.0;
 
 namespace detail {
-
-// The mesh whose sensitivities are as good as the values of `level`: one level finer, for hurst
-// loses a factor 20 to 40 against phi on the same mesh, and a first element short enough for relative
-// accuracy at the shortest maturities. Measured against the finest mesh at tolerance 1e-8: in 3,190 of 3,200
-// random models every sensitivity is within 1e-7 of the largest along its line, the worst at 6e-7.
-inline graded_level tangent_ladder(double hurst, std::size_t level) {
-    auto rung = graded_ladder(hurst, std::min(level + 1, graded_levels - 1));
-    rung.first *= 0.4;
-    return rung;
-}
-
-// |c0 c2| t^(2 alpha) below which the scaling laws lose more than a digit.
-inline constexpr double nearly_linear = 0.1;
-
-// Which channels of tangent_block::values are kept, and where: the derivatives, then the basis, the
-// values last. `rows` maturities each.
-struct raw_rows {
-    bool kept[tangent_channels];
-    bool needs_psi;  // by the scaling law of c2, or for itself
-    bool basis_is_value;  // but for its level: a single elementary curve costs nothing
-    std::size_t first[tangent_channels], basis, basis_rows, all;
-
-    raw_rows(const sensitivity_request& wanted, const model_parameters& m,
-             const variance_curve& curve, std::size_t rows) {
-        const bool driven = curve.form == curve_form::driven;
-        const bool of_c1 = wanted.vol_of_vol || wanted.correlation || wanted.mean_reversion;
-        kept[channel_value] = true, kept[channel_c1] = of_c1;
-        kept[channel_c2] = wanted.vol_of_vol, kept[channel_alpha] = wanted.hurst;
-        kept[channel_psi] = wanted.mean_reversion && !driven;
-        needs_psi = kept[channel_psi] || (of_c1 && (driven || m.mean_reversion != 0.0));
-        all = 0;
-        for (std::size_t c = 1; c < tangent_channels; ++c) {
-            first[c] = all;
-            all += kept[c] ? rows : 0;
-        }
-        basis_is_value = wanted.curve && curve.basis_size() == 1 && curve.levels[0] > 0.0;
-        basis = all, basis_rows = wanted.curve && !basis_is_value ? curve.basis_size() * rows : 0;
-        all += basis_rows;
-        first[channel_value] = all;
-        all += rows;
-    }
-};
-
-// One solve at one level of the u numbered in `which`; raw[r * u.size() + i]: row r of `layout` at
-// u[i]. Of `record` it fills `solved` and `doubt`.
-inline void tangent_pass(const target_kernels& kernels, const graded_level& level,
-                         const model_parameters& m, const variance_curve& curve,
-                         std::span<const std::complex<double>> u, std::span<const std::size_t> which,
-                         std::span<const double> maturities, const sensitivity_request& wanted,
-                         const raw_rows& layout, bool one_mesh, std::span<std::complex<double>> raw,
-                         graded_record& record) {
-    const std::size_t lanes = kernels.graded_lanes, row = 2 * lanes, n = which.size();
-    const std::size_t rows = maturities.size(), basis_rows = layout.basis_rows;
-    const double horizon = maturities.back(), alpha = m.alpha();
-    std::vector<riccati_coefficients> c(n);
-    std::vector<std::size_t> elements(n), order(n);
-    for (std::size_t i = 0; i < n; ++i) {
-        c[i] = riccati(m, u[which[i]]);
-        elements[i] = graded_elements(level, alpha, c[i], horizon);
-        order[i] = i;
-    }
-    const std::size_t most = *std::ranges::max_element(elements);
-    if (one_mesh) std::fill(elements.begin(), elements.end(), most);
-    std::ranges::stable_sort(order, {}, [&](std::size_t i) { return elements[i]; });
-
-    const auto plan = plan_of(kernels, alpha, level.nodes, level.ratio, most);
-    const auto tangent = tangent_plan_of(kernels, plan);
-    const graded_meshes meshes(*plan, horizon, most);
-    std::vector<double> log_edges;
-    for (const double edge : meshes.edges) log_edges.push_back(std::log(edge));
-    const auto shares = make_tangent_shares(meshes, curve, maturities, basis_rows != 0);
-    std::vector<tangent_entries> entries(4 * most);
-    tangent_entries *const on_f = entries.data(), *const on_psi = on_f + most,
-                    *const basis_f = on_psi + most, *const basis_psi = basis_f + most;
-
-    const std::size_t size = 1 + level.nodes * most;
-    aligned_buffer inputs(2 * row), outputs(6 * lanes), psi(size * row);
-    aligned_buffer workspace(graded_workspace(level.nodes, most, lanes));
-    aligned_buffer tangent_space(tangent_workspace(level.nodes, most, lanes));
-    aligned_buffer values(tangent_values(rows, basis_rows) * row);
-    double *const c0 = inputs.data(), *const c1 = c0 + row;
-    double *const status = outputs.data(), *const never = status + lanes,
-           *const doubt = never + lanes, *const guessed = doubt + lanes,
-           *const remainder = guessed + lanes, *const direct = remainder + lanes;
-    auto block = work_order(*plan);
-    block.c0 = c0, block.c1 = c1, block.c2 = 0.5 * m.vol_of_vol * m.vol_of_vol;
-    block.accuracy = level.accuracy, block.of_logarithm = true;
-    block.least_variance = least_variance(curve, m.mean_reversion);
-    block.typical_variance = integrated_curve(curve, alpha, horizon) / horizon;
-    std::fill_n(never, lanes, -std::numeric_limits<double>::infinity());
-    block.negligible = never, block.doubt = doubt, block.guessed = guessed;
-    block.remainder = remainder, block.status = status;
-    block.psi = psi.data(), block.workspace = workspace.data();
-
-    const bool driven = curve.form == curve_form::driven;
-    tangent_block t{};
-    t.solved = &block;
-    t.start_inverse = tangent->start.inverse.data(), t.step_inverse = tangent->step.inverse.data();
-    t.start_change = tangent->start.own_change.data();
-    t.step_change = tangent->step.own_change.data();
-    t.from_zero = tangent->from_zero.data(), t.from_zero_change = tangent->from_zero_change.data();
-    t.from_first = tangent->from_first.data();
-    t.from_first_change = tangent->from_first_change.data();
-    t.lag = tangent->lag.data(), t.lag_change = tangent->lag_change.data();
-    t.first_total_change = tangent->first_total_change.data();
-    t.alpha = alpha, t.mix = driven ? 0.0 : m.mean_reversion, t.driven = driven;
-    t.of_c1 = layout.kept[channel_c1], t.of_alpha = layout.kept[channel_alpha];
-    t.of_psi = layout.needs_psi;
-    t.direct = direct, t.rows = rows, t.basis_rows = basis_rows;
-    t.functionals = {on_f, on_psi, basis_f, basis_psi};
-    t.values = values.data(), t.workspace = tangent_space.data();
-    const double shortest = std::pow(maturities.front(), 2.0 * alpha);
-
-    for (std::size_t start = 0; start < n;) {
-        const std::size_t k = elements[order[start]], skipped = most - k;
-        std::size_t end = start;
-        while (end < n && elements[order[end]] == k) ++end;
-        const auto first =
-            make_first_tangent_share(meshes, *tangent, k, curve, maturities, basis_rows != 0);
-        for (std::size_t e = 0; e < k; ++e) {
-            const auto& share = e ? shares[skipped + e - 1] : first;
-            on_f[e] = share.on_f.view(), on_psi[e] = share.on_psi.view();
-            basis_f[e] = share.basis_f.view(), basis_psi[e] = share.basis_psi.view();
-        }
-        block.elements = k;
-        block.scales = meshes.scales.data() + skipped, block.lengths = meshes.edges.data() + skipped;
-        block.settling = meshes.settling.data() + skipped;
-        t.log_lengths = log_edges.data() + skipped;
-        for (; start < end; start += lanes) {
-            const std::size_t filled = std::min(lanes, end - start);
-            t.of_c2 = false;
-            for (std::size_t i = 0; i < lanes; ++i) {  // idle lanes repeat the last one
-                const auto& from = c[order[start + std::min(i, filled - 1)]];
-                c0[i] = from.c0.real(), c0[lanes + i] = from.c0.imag();
-                c1[i] = from.c1.real(), c1[lanes + i] = from.c1.imag();
-                const bool linear = std::abs(from.c0) * from.c2 * shortest < nearly_linear;
-                direct[i] = linear;
-                t.of_c2 |= linear && wanted.vol_of_vol;
-            }
-            kernels.solve_graded_block(block);
-            kernels.solve_graded_tangents_block(t);
-            for (std::size_t i = 0; i < filled; ++i) {
-                const std::size_t to = which[order[start + i]];
-                record.solved[to] = status[i] == 0.0, record.doubt[to] = doubt[i];
-            }
-            const std::size_t at = which[order[start]];
-            bool contiguous = true;
-            for (std::size_t i = 0; i < filled; ++i) contiguous &= which[order[start + i]] == at + i;
-            auto copy = [&](std::size_t from, std::size_t count, std::size_t row_to) {
-                for (std::size_t r = 0; r < count; ++r) {
-                    const double* const re = values.data() + (from + r) * row;
-                    const double* const im = re + lanes;
-                    std::complex<double>* const to = raw.data() + (row_to + r) * u.size();
-                    double finite = 0.0;
-                    for (std::size_t i = 0; i < filled; ++i) finite += re[i] * 0.0 + im[i] * 0.0;
-                    if (contiguous)
-                        for (std::size_t i = 0; i < filled; ++i) to[at + i] = {re[i], im[i]};
-                    else
-                        for (std::size_t i = 0; i < filled; ++i)
-                            to[which[order[start + i]]] = {re[i], im[i]};
-                    for (std::size_t i = 0; finite != 0.0 && i < filled; ++i)
-                        if (re[i] - re[i] != 0.0 || im[i] - im[i] != 0.0)
-                            record.solved[which[order[start + i]]] = false;
-                }
-            };
-            for (std::size_t c = 0; c < tangent_channels; ++c)
-                if (layout.kept[c]) copy(c * rows, rows, layout.first[c]);
-            copy(tangent_channels * rows, basis_rows, layout.basis);
-        }
-        start = end;
-    }
-}
 
 // From the raw channels to the parameters asked for, in the order hurst, vol_of_vol, correlation,
 // mean_reversion: c1 = iu rho nu - lambda, c2 = nu^2/2, and lambda multiplies int xi psi in log phi.
@@ -305,14 +118,13 @@ inline bool tangent_line(const target_kernels& kernels, const graded_level& leve
     for (std::size_t r = 0; r < served; ++r)
         for (std::size_t k = 0; flat[r] && k < unscale.size(); ++k)
             raw[r * n + line.members[k]] *= unscale[k];
-    const bool driven = curve.form == curve_form::driven;
     for (std::size_t k = 0; layout.basis_rows && k < curve.basis_size(); ++k) {
-        const double level_of = driven ? (k ? curve.levels[k - 1] : curve.initial) : curve.levels[k];
+        const double amount = curve.amount(k);
         for (std::size_t t = 0; t < rows; ++t) {
             const std::complex<double>* const from = raw.data() + (layout.basis + k * rows + t) * n;
             std::complex<double>* const to = raw.data() + (layout.first[channel_value] + t) * n;
             for (const std::size_t i : line.members)
-                to[i] = (k ? to[i] : std::complex<double>{}) + level_of * from[i];
+                to[i] = (k ? to[i] : std::complex<double>{}) + amount * from[i];
         }
     }
     return true;
@@ -334,19 +146,7 @@ inline std::size_t solve_log_sensitivities(const target_kernels& kernels, const 
     const std::size_t n = u.size(), rows = maturities.size();
     const detail::raw_rows layout(wanted, m, curve, rows);
     error_bounds bounds;
-    std::map<double, std::uint32_t> imaginary;
-    for (std::size_t i = 0; i < n; ++i) {
-        const double y = u[i].imag();
-        if (i && y == u[i - 1].imag()) {
-            bounds.line.push_back(bounds.line.back());
-            continue;
-        }
-        const auto [entry, is_new] =
-            imaginary.try_emplace(y, static_cast<std::uint32_t>(imaginary.size()));
-        bounds.line.push_back(entry->second);
-        if (is_new) require_finite_moment(m, -y, maturities);
-    }
-    bounds.lines = imaginary.size();
+    bounds.number(u, [&](double y) { require_finite_moment(m, -y, maturities); });
 
     const auto storage = std::make_unique_for_overwrite<double[]>(2 * layout.all * n);
     const std::span raw(reinterpret_cast<std::complex<double>*>(storage.get()), layout.all * n);
@@ -387,13 +187,10 @@ inline std::size_t solve_log_sensitivities(const target_kernels& kernels, const 
     }
     if (m.hurst == 0.5) {
         std::vector<std::complex<double>> elementary(curve.basis_size());
-        const bool driven = curve.form == curve_form::driven;
         for (std::size_t t = 0; t < rows; ++t)
             for (std::size_t i = 0; i < n; ++i) {
                 classical_basis(m, curve, u[i], maturities[t], elementary.data());
-                auto& sum = value[t * n + i] = driven ? curve.initial * elementary[0] : 0.0;
-                for (std::size_t k = 0; k < curve.levels.size(); ++k)
-                    sum += curve.levels[k] * elementary[k + driven];
+                value[t * n + i] = curve.combine(elementary.data());
                 for (std::size_t k = 0; layout.basis_rows && k < elementary.size(); ++k)
                     raw[(layout.basis + k * rows + t) * n + i] = elementary[k];
             }

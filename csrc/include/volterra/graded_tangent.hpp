@@ -132,28 +132,17 @@ template <std::size_t m>
 VOLTERRA_INLINE void tangent_history(const tangent_block& t, std::size_t k, const double* dG,
                                      const double* G, double* h) {
     constexpr std::size_t rows = tile_rows<m>;
-    const std::size_t first = k ? (k - 1) * m * (m + 1) : 0, lag = (t.solved->lags + 1 - k) * m * m;
+    const std::size_t lags = t.solved->lags;
     for (std::size_t top = 0; top < m; top += rows) {
         pack acc[rows][row_packs] = {};
-        if (k == 0) {
-            multiply_tile<rows>(acc, t.from_zero + top, m, dG, 1);
-        } else {
-            multiply_tile<rows>(acc, t.from_first + first + top, m, dG, m + 1);
-            multiply_tile<rows>(acc, t.lag + lag + top, m, dG + (1 + m) * row, (k - 1) * m);
+        add_history<m>(acc, {t.from_zero, t.from_first, t.lag, lags}, k, top, dG);
+        if (G) {
+            add_history<m>(acc, {t.from_zero_change, t.from_first_change, t.lag_change, lags}, k, top,
+                           G);
+            multiply_tile<rows>(acc, (k ? t.step_change : t.start_change) + top, m,
+                                G + (1 + k * m) * row, m);
         }
-        if (G && k == 0) {
-            multiply_tile<rows>(acc, t.from_zero_change + top, m, G, 1);
-            multiply_tile<rows>(acc, t.start_change + top, m, G + row, m);
-        } else if (G) {
-            multiply_tile<rows>(acc, t.from_first_change + first + top, m, G, m + 1);
-            multiply_tile<rows>(acc, t.lag_change + lag + top, m, G + (1 + m) * row, (k - 1) * m);
-            multiply_tile<rows>(acc, t.step_change + top, m, G + (1 + k * m) * row, m);
-        }
-        VOLTERRA_UNROLL
-        for (std::size_t i = 0; i < rows; ++i)
-            VOLTERRA_UNROLL
-            for (std::size_t c = 0; c < row_packs; ++c)
-                store(h + (top + i) * row + c * pack_width, acc[i][c]);
+        store_tile<rows>(acc, h + top * row);
     }
 }
 

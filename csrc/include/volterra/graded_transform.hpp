@@ -10,6 +10,7 @@
 #include <cstddef>
 #include <cstdint>
 #include <limits>
+#include <map>
 #include <span>
 #include <vector>
 
@@ -33,6 +34,25 @@ struct error_bounds {
     std::vector<double> bound;        // maturities x lines
 
     double operator()(std::size_t t, std::size_t i) const { return bound[t * lines + line[i]]; }
+
+    // Numbers the lines of u; calls first(Im u) at the first u of each.
+    template <class First>
+    void number(std::span<const std::complex<double>> u, First&& first) {
+        std::map<double, std::uint32_t> numbers;
+        line.reserve(u.size());
+        for (std::size_t i = 0; i < u.size(); ++i) {
+            const double y = u[i].imag();
+            if (i && y == u[i - 1].imag()) {
+                line.push_back(line.back());
+                continue;
+            }
+            const auto [entry, is_new] =
+                numbers.try_emplace(y, static_cast<std::uint32_t>(numbers.size()));
+            line.push_back(entry->second);
+            if (is_new) first(y);
+        }
+        lines = numbers.size();
+    }
 };
 
 // The rung of mesh.hpp that a u, or a line of them, starts from. Near the imaginary axis beyond the

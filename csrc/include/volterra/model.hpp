@@ -36,6 +36,20 @@ struct variance_curve {
 
     // Elementary curves whose linear combination is this one: V0 first when driven, then levels.
     std::size_t basis_size() const { return levels.size() + (form == curve_form::driven); }
+
+    // How much of elementary curve k this one holds.
+    double amount(std::size_t k) const {
+        if (form == curve_form::market) return levels[k];
+        return k ? levels[k - 1] : initial;
+    }
+
+    // This curve's value of a functional from those of the elementary curves.
+    template <class Value>
+    Value combine(const Value* elementary) const {
+        Value sum = amount(0) * elementary[0];
+        for (std::size_t k = 1; k < basis_size(); ++k) sum += amount(k) * elementary[k];
+        return sum;
+    }
 };
 
 // Calls visit(k, from, to) for the pieces of s -> level(maturity - s) on [0, maturity], k the index

@@ -8,7 +8,6 @@
 #include <cstddef>
 #include <cstdint>
 #include <limits>
-#include <map>
 #include <span>
 #include <vector>
 
@@ -81,28 +80,16 @@ private:
     // moment is checked to be finite.
     void scale_bounds() {
         const double longest = detail::integrated_curve(curve_, m_.alpha(), maturities_.back());
-        std::map<double, std::uint32_t> lines;  // Im u -> line
         std::vector<complex> axis;
         std::vector<double> fixed;  // scale of each line, 0 where it has to be computed
-        bounds_.line.reserve(u_.size());
-        for (std::size_t i = 0; i < u_.size(); ++i) {
-            const double y = u_[i].imag();
-            if (i && y == u_[i - 1].imag()) {
-                bounds_.line.push_back(bounds_.line.back());
-                continue;
-            }
-            const auto [entry, is_new] =
-                lines.try_emplace(y, static_cast<std::uint32_t>(lines.size()));
-            bounds_.line.push_back(entry->second);
-            if (!is_new) continue;
+        bounds_.number(u_, [&](double y) {
             const bool known = y == 0.0 || y == -1.0;  // E[1] = E[exp X] = 1
             if (!known) require_finite_moment(m_, -y, maturities_);
             // Between the two, exp(p E[X]) <= E[exp(pX)] <= 1, p = -Im u, E[X] >= -int g0 / 2.
             const bool close = -1.0 < y && y < 0.0 && -y * longest < 0.1;
             fixed.push_back(known ? 1.0 : close ? 0.95 : 0.0);
             if (fixed.back() == 0.0) axis.emplace_back(0.0, y);
-        }
-        bounds_.lines = fixed.size();
+        });
         const auto sizes = rough_values(axis);
         for (std::size_t t = 0; t < maturities_.size(); ++t)
             for (std::size_t l = 0, k = 0; l < fixed.size(); ++l) {
@@ -138,11 +125,7 @@ private:
     complex classical(complex z, double maturity) const {
         std::vector<complex> basis(curve_.basis_size());
         classical_basis(m_, curve_, z, maturity, basis.data());
-        const bool driven = curve_.form == curve_form::driven;
-        complex sum = driven ? curve_.initial * basis[0] : 0.0;
-        for (std::size_t k = 0; k < curve_.levels.size(); ++k)
-            sum += curve_.levels[k] * basis[k + driven];
-        return sum;
+        return curve_.combine(basis.data());
     }
 
     void solve_closed_form() {
