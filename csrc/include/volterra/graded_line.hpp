@@ -42,7 +42,7 @@ struct line_grid {
 inline line_grid make_line_grid(const model_parameters& m, double imaginary, double maturity,
                                 double variance, double tolerance) {
     constexpr double moderate = 100.0;  // |log phi| at the end of the line
-    line_grid grid{imaginary, 0.0, {}, {}, {}};
+    line_grid grid{imaginary, -1.0, {}, {}, {}};  // serves nobody
     const double alpha = m.alpha(), z = std::pow(maturity, alpha);
     const double settling = variance * maturity / (z * std::tgamma(2.0 - alpha));
     for (double reach = 2048.0; reach >= 16.0; reach *= 0.5) {
@@ -54,7 +54,7 @@ inline line_grid make_line_grid(const model_parameters& m, double imaginary, dou
         grid.reach = reach;
         break;
     }
-    if (grid.reach == 0.0) return grid;
+    if (grid.reach < 0.0) return grid;
     // Analytic in |Im s| < pi/2 at least: moments between 0 and 1 are finite, so the nearest
     // singularity lies at a distance of 1/2 or more from the line -1/2; the caller checks.
     const double end = std::asinh(grid.reach), ellipse = 0.5 * std::acos(-1.0) / end;
