@@ -2,18 +2,7 @@
 
 import numpy as np
 import pytest
-
-import pyvolterra as pv
-
-
-def flat_model(hurst, vol_of_vol, correlation, level=0.04, mean_reversion=0.0):
-    return pv.VolterraHeston(
-        pv.FractionalKernel(hurst),
-        vol_of_vol=vol_of_vol,
-        correlation=correlation,
-        mean_reversion=mean_reversion,
-        forward_variance=pv.ForwardVariance.flat(level),
-    )
+from flat_models import flat_model
 
 
 @pytest.mark.parametrize("seed", range(40))

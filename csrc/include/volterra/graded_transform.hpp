@@ -55,11 +55,15 @@ struct error_bounds {
     }
 };
 
-// The rung of mesh.hpp that a u, or a line of them, starts from. Near the imaginary axis beyond the
-// moments 0 and 1, where psi may be close to its explosion, the ladder is too short by up to a half.
-inline std::size_t first_rung(double bound, double real, double imaginary) {
+// The rung of mesh.hpp that a u, or a line of them, starts from. The ladder is too short by up to a half
+// near the imaginary axis beyond the moments 0 and 1, where psi may be close to its explosion, and by
+// one or two levels for positive correlations beyond those it was calibrated for, where psi grows
+// before it settles.
+inline std::size_t first_rung(const model_parameters& m, double bound, double real,
+                              double imaginary) {
     const bool close = std::abs(real) < 1.0 && (imaginary >= 0.0 || imaginary <= -1.0);
-    return 2 * graded_level_for(bound) + close;
+    const std::size_t more = m.correlation > 0.9 ? 4 : m.correlation > 0.5 ? 2 : 0;
+    return std::min(2 * graded_level_for(bound) + close + more, graded_rungs - 3);
 }
 
 // The rung whose solution tells the error of another one's.
@@ -90,7 +94,7 @@ inline std::vector<line_task> lines_of(const model_parameters& m, const variance
         if (at == 0) {
             const double variance = detail::integrated_curve(curve, m.alpha(), longest) / longest;
             lines.push_back({make_line_grid(m, u[i].imag(), longest, variance, bound[i]), variance,
-                             bound[i], first_rung(bound[i], 0.0, u[i].imag()), {}, {}});
+                             bound[i], first_rung(m, bound[i], 0.0, u[i].imag()), {}, {}});
             at = lines.size();
         }
         if (std::abs(u[i].real()) <= lines[at - 1].grid.reach) lines[at - 1].members.push_back(i);
@@ -127,7 +131,7 @@ inline double solve_log_transform(const target_kernels& kernels, const model_par
                 bound[i] = std::min(bound[i], bounds(t, i));
             cut[i] = std::log(graded_negligible * bound[i]);
         }
-        level[i] = first_rung(bound[i], u[i].real(), u[i].imag());
+        level[i] = first_rung(m, bound[i], u[i].real(), u[i].imag());
     }
     auto pass = [&](std::span<std::complex<double>> into, graded_record& record) {
         for (std::size_t l = 0; l < graded_rungs; ++l) {
