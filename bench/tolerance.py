@@ -4,8 +4,8 @@
 
 Random models, each at five maturities and 40 arguments on one line, three kinds of variance curve.
 The truth is the finest mesh, every u solved for itself (bench/accuracy.py compares with a series
-that shares nothing with it). Counted are values beyond the tolerance without a warning, and estimates
-below the error; both leave out what rounding does, 30 ulp of |u|^2 int xi |phi|.
+that shares nothing with it). Counted are values beyond the tolerance without a warning, and
+estimates below the error; both leave out what rounding does, 30 ulp of |u|^2 int xi |phi|.
 """
 
 import argparse
